@@ -1,0 +1,397 @@
+"""ADMIT: one raw Observation becomes readings, or a reason. The only place that interprets codes, units, blood,
+status, comparators and time.
+"""
+
+from __future__ import annotations
+
+import hashlib
+import re
+from functools import lru_cache
+from typing import Any, Final, NamedTuple
+
+from fhiro2.admit.coding import SATURATION_OR_PULSE, Coder
+from fhiro2.admit.context import Context, Interpreter, SpecimenEntry
+from fhiro2.admit.moment import moment
+from fhiro2.admit.rows import Rows
+from fhiro2.admit.value import Value, Valuer
+from fhiro2.catalogue import MEASURED_BY_NAME, QUANTITY
+from fhiro2.codes import Code
+from fhiro2.errors import Bucket, Reason, SkipError
+from fhiro2.fhir.systems import IDENTIFIERS, OBSERVATION_CATEGORY
+from fhiro2.fhir.wire import Component, Observation, Reference, canonical
+from fhiro2.model import MINUTE, Caution, Kind, Specimen, SpecimenEvidence
+
+NAN: Final = float("nan")
+FUTURE: Final = 5 * MINUTE
+_ACCEPTED: Final = frozenset({"final", "amended", "corrected"})
+_WAITING: Final = frozenset({"preliminary", "registered"})
+_RETRACTED: Final = frozenset({"entered-in-error", "cancelled"})
+_ID: Final = re.compile(r"[A-Za-z0-9\-.]{1,64}", re.ASCII)
+_VENOUS: Final = frozenset({Specimen.VENOUS, Specimen.MIXED_VENOUS, Specimen.CENTRAL_VENOUS})
+_METHOD_CAUTION: Final = {
+    "unknown": int(Caution.CARDIAC_OUTPUT_METHOD_UNKNOWN),
+    "fick": int(Caution.CARDIAC_OUTPUT_METHOD_UNKNOWN),
+    "legacy": int(Caution.LEGACY_CODE),
+    "from-haematocrit": int(Caution.CALCULATED_HAEMOGLOBIN),
+}
+
+
+class Admission(NamedTuple):
+    """Where one resource version ended, why, and which of its components were refused."""
+
+    bucket: Bucket
+    reason: Reason | None = None
+    detail: str = ""
+    parts: tuple[tuple[int, SkipError], ...] = ()
+
+
+class _Setting(NamedTuple):
+    """What holds for all values of one resource."""
+
+    subject: int
+    effective: int
+    known: int
+    cautions: int
+    encounter: int
+    device: int
+    sample: int
+    origin: int
+    blood: Specimen
+    site: Specimen
+    laboratory: bool
+    vital_sign: bool
+
+
+_USED: Final = Admission(Bucket.USED)
+
+
+class Admitter:
+    """Admits the Observations of one source into ``rows`` by that source's context."""
+
+    def __init__(
+        self,
+        source: str,
+        rows: Rows,
+        context: Context,
+        interpreter: Interpreter,
+        coder: Coder,
+        valuer: Valuer,
+        zone: str | None,
+        base_urls: tuple[str, ...],
+    ) -> None:
+        self._source = source
+        self._rows = rows
+        self._context = context
+        self._interpreter = interpreter
+        self._coder = coder
+        self._valuer = valuer
+        self._zone = zone
+        self._base_urls = base_urls
+        self._subjects: dict[str, int | SkipError] = {}
+
+    def admit(self, found: Observation) -> Admission:
+        """Add the readings of ``found``, or say why it gives none."""
+        try:
+            return self._admit(found)
+        except SkipError as error:
+            return Admission(error.bucket, error.reason, error.detail)
+
+    def _admit(self, found: Observation) -> Admission:
+        _check_identity(found)
+        if found.component or found.hasMember:
+            code = self._panel_code(found)
+        else:
+            code = self._coder.code(found.code)
+        if code is not None and code.use == "panel":
+            code = None
+        value = self._valuer.value(found, code) if code is not None else None
+        if code is None and not found.component:
+            if found.hasMember:
+                self._note_panel(found)
+                return Admission(Bucket.OUT_OF_SCOPE, Reason.GROUPING_ONLY)
+            raise SkipError(Reason.GROUPING_ONLY, "a panel without members")
+        setting = self._setting(found)
+        used = False
+        if code is not None and (value is not None or not found.component):
+            # no value and no stated reason is an absence as well: the measurement was asked for and gave nothing
+            self._add(setting, code, value or Value(), -1, None)
+            used = True
+        if found.hasMember:
+            self._note_panel(found)
+        if not found.component:
+            return _USED
+        return self._components(found, setting, used)
+
+    def _panel_code(self, found: Observation) -> Code | None:
+        try:
+            return self._coder.code(found.code)
+        except SkipError as error:
+            if error.reason in (Reason.UNMAPPED_CODE, Reason.NOT_USED_CODE):
+                return None
+            raise
+
+    def _components(self, found: Observation, setting: _Setting, used: bool) -> Admission:
+        admitted: list[tuple[int, Component, Code, Value]] = []
+        refused: list[tuple[int, SkipError]] = []
+        out_of_scope: SkipError | None = None
+        for number, part in enumerate(found.component):
+            try:
+                if part.modifierExtension is not None:
+                    raise SkipError(Reason.MODIFIER, "a component with an unknown modifier")
+                code = self._coder.code(part.code)
+                admitted.append((number, part, code, self._valuer.value(part, code) or Value()))
+            except SkipError as error:
+                if error.bucket is Bucket.QUARANTINED:
+                    refused.append((number, error))
+                else:
+                    out_of_scope = error
+        clashing = _clashing(admitted)
+        if any(code.quantity == "po2" for _, _, code, _ in admitted):
+            setting = setting._replace(laboratory=True)
+        for number, part, code, value in admitted:
+            if (code.quantity, code.specimen) in clashing:
+                refused.append((number, SkipError(Reason.CONFLICT, "one quantity twice with different values")))
+                continue
+            try:
+                self._add(setting, code, value, number, part)
+                used = True
+            except SkipError as error:
+                refused.append((number, error))
+        if not used and not refused and out_of_scope is not None:
+            raise out_of_scope
+        return Admission(Bucket.USED, parts=tuple(refused))
+
+    def _setting(self, found: Observation) -> _Setting:
+        subject = self._subject(found)
+        effective, cautions = self._effective(found)
+        known = effective
+        for text in (found.meta.lastUpdated if found.meta else None, found.issued):
+            if text is not None:
+                known = moment(text, self._zone)[0]
+                break
+        if effective > known + FUTURE:
+            raise SkipError(Reason.TIME, "later than it was known")
+        if found.issued is not None and moment(found.issued, self._zone)[0] < effective:
+            cautions |= int(Caution.TIME_ORDER)
+        specimen = self._specimen(found)
+        sample = ""
+        if specimen is not None and specimen.accession:
+            sample = f"accession {specimen.accession}"
+        elif found.specimen is not None and found.specimen.reference:
+            contained = found.specimen.reference.startswith("#")
+            sample = f"specimen {found.id if contained else ''}{found.specimen.reference}"
+        elif found.component or found.hasMember:
+            sample = f"panel {found.id}"
+        categories = [coding.code for row in found.category for coding in row.coding if coding.system == OBSERVATION_CATEGORY]
+        rows = self._rows
+        version = found.meta.versionId if found.meta and found.meta.versionId else ""
+        return _Setting(
+            subject,
+            effective,
+            known,
+            cautions,
+            rows.encounters.number(_plain(found.encounter, "Encounter")),
+            rows.devices.number(f"{self._source}|{found.device.reference}" if found.device else ""),
+            rows.samples.number(f"{self._source}|{sample}" if sample else ""),
+            rows.origin(found.id or "", version, "" if version else _content_hash(found)),
+            specimen.kind if specimen else Specimen.UNKNOWN,
+            self._body_site(found, specimen),
+            "laboratory" in categories or found.specimen is not None,
+            "vital-signs" in categories,
+        )
+
+    def _add(self, setting: _Setting, code: Code, value: Value, part: int, component: Component | None) -> None:
+        quantity, kind, cautions = code.quantity, code.kind, setting.cautions | value.cautions
+        if code.loinc == SATURATION_OR_PULSE and quantity == "so2":
+            if not setting.laboratory:
+                if not setting.vital_sign:
+                    raise SkipError(Reason.AMBIGUOUS, "2708-6 without category or specimen: oximetry of which kind")
+                quantity = "spo2"
+            cautions |= int(Caution.METHOD_NOT_STATED)
+        blood, evidence = Specimen.NONE, 0
+        if code.specimen is not Specimen.NONE and quantity != "spo2":
+            agreed = _blood(code.specimen, setting.blood, setting.site)
+            if agreed is None:
+                raise SkipError(Reason.SPECIMEN, "code, specimen and body site name different blood")
+            blood, evidence = agreed
+            if blood is Specimen.MIXED_VENOUS and evidence == SpecimenEvidence.CODE:
+                cautions |= int(Caution.MIXED_VENOUS_UNPROVEN)
+        if code.method:
+            cautions |= _METHOD_CAUTION.get(code.method, 0)
+        self._rows.add(
+            -1,
+            setting.subject,
+            setting.effective,
+            setting.known,
+            QUANTITY[quantity],
+            value.value,
+            value.low,
+            value.high,
+            NAN,
+            value.answer,
+            blood,
+            evidence,
+            Kind.ESTIMATED if code.quantity == "hb" and code.method == "from-haematocrit" else kind,
+            code.corrected,
+            cautions,
+            setting.encounter,
+            setting.device,
+            setting.sample,
+            setting.origin,
+            part,
+        )
+
+    def _subject(self, found: Observation) -> int:
+        reference = found.subject
+        if reference is None:
+            raise SkipError(Reason.SUBJECT, "no subject")
+        text = reference.reference
+        if text is None or text.startswith("#"):
+            return self._number(self._by_identifier(found, reference))
+        known = self._subjects.get(text)
+        if known is None:
+            try:
+                known = self._number(self._patient(text))
+            except SkipError as error:
+                known = error
+            self._subjects[text] = known
+        if isinstance(known, SkipError):
+            raise known
+        return known
+
+    def _number(self, patient: str) -> int:
+        if patient in self._context.excluded:
+            raise SkipError(Reason.EXCLUDED_PATIENT, "on the list of excluded patients")
+        return self._rows.subjects.number(f"{self._source}|{patient}")
+
+    def _patient(self, text: str) -> str:
+        kind, _, identity = self._local(text).partition("/")
+        if kind != "Patient" or not _ID.fullmatch(identity):
+            raise SkipError(Reason.SUBJECT, "the subject is not a patient of this source")
+        return f"Patient/{identity}"
+
+    def _local(self, text: str) -> str:
+        """A reference as ``Type/id`` of this source, where it can be known to be one."""
+        text = self._context.aliases.get(text, text)
+        for base in self._base_urls:
+            text = text.removeprefix(base.rstrip("/") + "/")
+        return text.partition("/_history/")[0]
+
+    def _by_identifier(self, found: Observation, reference: Reference) -> str:
+        identifiers = [reference.identifier]
+        if reference.reference:
+            contained = _contained(found, reference.reference)
+            if contained is None or contained.get("resourceType") != "Patient":
+                raise SkipError(Reason.SUBJECT, "the contained subject is missing or not a patient")
+            identifiers = list(contained.get("identifier") or ())
+        for row in identifiers:
+            if isinstance(row, dict) and isinstance(row.get("value"), str):
+                patient = self._context.patient_of(str(row.get("system", "")), row["value"])
+                if patient is not None:
+                    return patient
+        raise SkipError(Reason.SUBJECT, "the subject's identifier names no patient, or several")
+
+    def _effective(self, found: Observation) -> tuple[int, int]:
+        stated = (found.effectiveDateTime, found.effectiveInstant, found.effectivePeriod, found.effectiveTiming)
+        if sum(one is not None for one in stated) > 1:
+            raise SkipError(Reason.INVARIANT, "more than one effective[x]")
+        text = found.effectiveDateTime or found.effectiveInstant
+        if text is not None:
+            return moment(text, self._zone)
+        period = found.effectivePeriod
+        if period is None or period.start is None:
+            raise SkipError(Reason.TIME, "no time that can be paired")
+        start, caution = moment(period.start, self._zone)
+        return start, caution if period.end is not None else caution | int(Caution.OPEN_PERIOD)
+
+    def _specimen(self, found: Observation) -> SpecimenEntry | None:
+        if found.specimen is None or found.specimen.reference is None:
+            return None
+        text = found.specimen.reference
+        if text.startswith("#"):
+            contained = _contained(found, text)
+            if contained is None or contained.get("resourceType") != "Specimen":
+                return None
+            return self._interpreter.specimen(contained)
+        return self._context.specimens.get(self._local(text))
+
+    def _body_site(self, found: Observation, specimen: SpecimenEntry | None) -> Specimen:
+        if found.bodySite is not None:
+            stated = self._interpreter.kind([(row.system, row.code) for row in found.bodySite.coding])
+            if stated is not Specimen.UNKNOWN:
+                return stated
+        return specimen.site if specimen else Specimen.UNKNOWN
+
+    def _note_panel(self, found: Observation) -> None:
+        for member in found.hasMember:
+            if member.reference:
+                identity = member.reference.partition("/_history/")[0].rpartition("/")[2]
+                key = f"{self._source}|{identity}"
+                panel = f"{self._source}|panel {found.id}"
+                self._rows.panels[key] = min(panel, self._rows.panels.get(key, panel))
+
+
+def _check_identity(found: Observation) -> None:
+    if found.resourceType != "Observation":
+        raise SkipError(Reason.OTHER_TYPE, "not an Observation")
+    if found.id is None or not _ID.fullmatch(found.id):
+        raise SkipError(Reason.INVARIANT, "no valid id")
+    if found.identifier and is_own(found.identifier):
+        raise SkipError(Reason.OWN_OUTPUT, "written by this program")
+    if found.modifierExtension is not None:
+        raise SkipError(Reason.MODIFIER, "an unknown modifier extension")
+    if found.implicitRules is not None:
+        raise SkipError(Reason.VERSION, "implicit rules that are not known")
+    if found.status not in _ACCEPTED:
+        if found.status in _WAITING:
+            raise SkipError(Reason.PRELIMINARY, "not final yet")
+        if found.status in _RETRACTED:
+            raise SkipError(Reason.RETRACTED, "withdrawn by its source")
+        raise SkipError(Reason.STATUS, "a status that is not known or says unknown")
+
+
+def is_own(identifiers: Any) -> bool:
+    """Whether one of a resource's identifiers is of this program's own systems."""
+    return isinstance(identifiers, (list, tuple)) and any(
+        isinstance(row, dict) and isinstance(row.get("system"), str) and row["system"].startswith(IDENTIFIERS)
+        for row in identifiers
+    )
+
+
+@lru_cache(maxsize=None)
+def _blood(code: Specimen, specimen: Specimen, site: Specimen) -> tuple[Specimen, int] | None:
+    """The kind of blood that all evidence agrees on, with the evidence; None where it contradicts itself."""
+    blood, evidence = code, SpecimenEvidence.NOTHING if code is Specimen.UNKNOWN else SpecimenEvidence.CODE
+    for stated, kind in ((specimen, SpecimenEvidence.SPECIMEN), (site, SpecimenEvidence.BODY_SITE)):
+        if stated is Specimen.UNKNOWN:
+            continue
+        if blood is Specimen.UNKNOWN or (blood is Specimen.VENOUS and stated in _VENOUS):
+            blood, evidence = stated, evidence | kind
+        elif stated is blood or (stated is Specimen.VENOUS and blood in _VENOUS):
+            evidence |= kind if stated is blood else SpecimenEvidence.NOTHING
+        elif Specimen.PLASMA not in (blood, stated):
+            return None
+    return blood, int(evidence)
+
+
+def _clashing(admitted: list[tuple[int, Component, Code, Value]]) -> set[tuple[str, Specimen]]:
+    seen: dict[tuple[str, Specimen], Value] = {}
+    clashing = set()
+    for _, _, code, value in admitted:
+        first = seen.setdefault((code.quantity, code.specimen), value)
+        if first is not value and repr(first) != repr(value):
+            clashing.add((code.quantity, code.specimen))
+    return clashing
+
+
+def _contained(found: Observation, reference: str) -> dict[str, Any] | None:
+    return next((row for row in found.contained if row.get("id") == reference[1:]), None)
+
+
+def _plain(reference: Reference | None, kind: str) -> str:
+    text = reference.reference if reference and reference.reference else ""
+    return text if text.startswith(f"{kind}/") else ""
+
+
+def _content_hash(found: Observation) -> str:
+    return hashlib.sha256(canonical(found)).hexdigest()

@@ -1,0 +1,73 @@
+"""What could not be used, kept whole with its reason, so that nothing is lost and all of it can be tried again."""
+
+from __future__ import annotations
+
+import json
+from pathlib import Path
+from typing import Any
+
+from fhiro2.errors import Bucket, Reason
+from fhiro2.read import Raw, Source
+from fhiro2.timeline import Resolution
+
+
+class Quarantine:
+    """Writes ``quarantine.ndjson``: one line a quarantined resource or component that no later version replaced."""
+
+    def __init__(self, path: Path) -> None:
+        self._path = path
+        self._draft = path.with_name(path.name + ".draft")
+        self._partial = path.with_name(path.name + ".partial")
+        self._stream = self._draft.open("w+", encoding="utf-8")
+        self._settled = self._partial.open("w", encoding="utf-8")
+
+    def keep(
+        self,
+        row: int,
+        source: Source,
+        raw: Raw,
+        resource: str,
+        reason: Reason | None,
+        detail: str,
+        content: bytes,
+        part: int | None = None,
+    ) -> None:
+        """Keep one refused resource (or its component ``part``) until it is known whether its version stands."""
+        line: dict[str, Any] = {
+            "source": source.name,
+            "file": _file_name(source, raw.file),
+            "line": raw.line,
+            "resource": resource,
+            "reason": str(reason),
+            "detail": detail,
+            "raw": content.decode("utf-8", "backslashreplace"),
+        }
+        if part is not None:
+            line["component"] = part
+        self._stream.write(f"{row}\t{int(part is not None)}\t{json.dumps(line, ensure_ascii=True)}\n")
+
+    def settle(self, resolution: Resolution) -> None:
+        """Move the kept lines whose version stands (or stays quarantined) to the file; drop the replaced ones."""
+        self._stream.seek(0)
+        for kept in self._stream:
+            row, part, line = kept.split("\t", 2)
+            bucket, _ = resolution.standing(int(row))
+            if bucket is (Bucket.USED if part == "1" else Bucket.QUARANTINED):
+                self._settled.write(line)
+        self._stream.seek(0)
+        self._stream.truncate()
+
+    def close(self, *, keep: bool = True) -> None:
+        """Give the file its name, or leave nothing behind when the run failed."""
+        self._stream.close()
+        self._settled.close()
+        self._draft.unlink()
+        if keep:
+            self._partial.replace(self._path)
+        else:
+            self._partial.unlink()
+
+
+def _file_name(source: Source, number: int) -> str:
+    files: list[Path] = getattr(source, "files", [])
+    return files[number].name if number < len(files) else ""

@@ -1,0 +1,267 @@
+"""Commands, nothing else. Exit codes: 0 done, 1 done with findings that need a look, 2 refused to start or to go on."""
+
+from __future__ import annotations
+
+import json
+import sys
+import tempfile
+import time
+from collections.abc import Iterator
+from contextlib import contextmanager
+from datetime import UTC, datetime
+from pathlib import Path
+from typing import TYPE_CHECKING, Annotated, Any
+
+import typer
+from rich.console import Console
+from rich.progress import BarColumn, Progress, TextColumn, TimeRemainingColumn, TransferSpeedColumn
+
+from fhiro2 import __version__
+from fhiro2.errors import Fhiro2Error, StopError
+
+if TYPE_CHECKING:
+    from fhiro2.judge import Pack
+    from fhiro2.read.ndjson import NdjsonSource
+    from fhiro2.settings import Mapping, Settings
+
+app = typer.Typer(no_args_is_help=True, add_completion=False, rich_markup_mode=None, help=__doc__)
+rules_app = typer.Typer(no_args_is_help=True, help="Check the rules.")
+quarantine_app = typer.Typer(no_args_is_help=True, help="Look at what could not be used.")
+app.add_typer(rules_app, name="rules")
+app.add_typer(quarantine_app, name="quarantine")
+
+PASSES = 2  # sources are read twice: context first
+INTENDED_USE = (
+    "fhiro2 reads Observations that a hospital already keeps, computes oxygen-transport values with their "
+    "uncertainty, and raises flags for review by trained staff."
+)
+EXCLUSIONS = (
+    "It is not an alarm and not a monitor; it orders nothing and doses nothing.",
+    "Adult defaults; pregnancy, children, cyanotic heart disease, ECMO and altitude need rules of their own.",
+    "Absence of a flag is not evidence that all is well: a value may be missing, late or quarantined.",
+    "Rules and limits are defaults for local review. Local policy and licensed practice decide.",
+)
+
+Inputs = Annotated[list[str], typer.Argument(help="files or folders of NDJSON; NAME=PATH names the source")]
+SettingsFile = Annotated[Path | None, typer.Option("--settings", help="settings of the site (YAML)")]
+MappingFile = Annotated[Path | None, typer.Option("--mapping", help="signed mapping of the site (YAML)")]
+RulesFolder = Annotated[Path | None, typer.Option("--rules", help="folder of rules; the shipped ones without it")]
+AsJson = Annotated[bool, typer.Option("--json", help="print JSON for machines")]
+InFolder = Annotated[Path, typer.Option("--in", help="folder that a replay wrote")]
+
+
+@app.command()
+def demo(
+    once: Annotated[bool, typer.Option("--once", help="print the summary and end")] = False,
+    out: Annotated[Path | None, typer.Option("--out", help="keep the files here")] = None,
+) -> None:
+    """Run everything on the built-in synthetic ward."""
+    from fhiro2.demonstration import run_demo
+
+    if not once:
+        raise StopError("demo without --once needs the review page, which this version does not have; add --once")
+    with tempfile.TemporaryDirectory() as scratch:
+        run_demo(Console(), out or Path(scratch))
+
+
+@app.command()
+def replay(
+    inputs: Inputs,
+    out: Annotated[Path, typer.Option("--out", help="folder for what is written")],
+    settings: SettingsFile = None,
+    mapping: MappingFile = None,
+    rules: RulesFolder = None,
+    as_json: AsJson = False,
+) -> None:
+    """Send past resources through the whole way, into files."""
+    from fhiro2.replay import replay as run
+    from fhiro2.terminal import show_account, show_derived
+
+    with _reading(inputs) as sources:
+        account = run(sources, out, _settings(settings), _mapping(mapping), _pack(rules)).as_json()
+    if as_json:
+        _print_json(account)
+    else:
+        console = Console()
+        show_account(console, account)
+        show_derived(console, account)
+        console.print(f"\nFlags for review: {account['flags_raised']}. Written to {out}.", highlight=False)
+    raise typer.Exit(1 if account["quarantined"] or account["parts_quarantined"] else 0)
+
+
+@app.command()
+def census(
+    inputs: Inputs,
+    settings: SettingsFile = None,
+    mapping: MappingFile = None,
+    rules: RulesFolder = None,
+) -> None:
+    """Say what a feed holds, which values it allows, and what is missing most."""
+    from fhiro2.census import census as run
+    from fhiro2.terminal import show_census
+
+    with _reading(inputs) as sources:
+        found = run(sources, _settings(settings), _mapping(mapping), _pack(rules))
+    show_census(Console(), found)
+
+
+@app.command()
+def account(folder: InFolder, as_json: AsJson = False) -> None:
+    """Show the account of a replay."""
+    from fhiro2.terminal import show_account, show_derived
+
+    found = _load(folder / "account.json")
+    if as_json:
+        _print_json(found)
+    else:
+        show_account(Console(), found)
+        show_derived(Console(), found)
+
+
+@quarantine_app.command("list")
+def quarantine_list(folder: InFolder, as_json: AsJson = False) -> None:
+    """List the quarantined resources of a replay."""
+    from fhiro2.terminal import show_quarantine
+
+    path = folder / "quarantine.ndjson"
+    try:
+        lines = [json.loads(line) for line in path.read_text(encoding="utf-8").splitlines()]
+    except (OSError, ValueError):
+        raise StopError(f"{path}: cannot be read; name the folder that a replay wrote") from None
+    if as_json:
+        _print_json([{key: value for key, value in line.items() if key != "raw"} for line in lines])
+    else:
+        show_quarantine(Console(), lines)
+    raise typer.Exit(1 if lines else 0)
+
+
+@rules_app.command("check")
+def rules_check(
+    folder: Annotated[Path | None, typer.Argument(help="folder of rules; the shipped ones without it")] = None,
+) -> None:
+    """Load every rule strictly and run its cases."""
+    from fhiro2.judge import check_pack
+    from fhiro2.packaged import rules_folder
+
+    report = check_pack(folder or rules_folder(), datetime.now(UTC).date())
+    console = Console()
+    for line in report.lines():
+        console.print(line, highlight=False, markup=False)
+    raise typer.Exit(2 if report.failed else 1 if report.warned else 0)
+
+
+@app.command()
+def about() -> None:
+    """Intended use, exclusions, versions, and which evaluators run."""
+    import importlib.util
+
+    from fhiro2.codes import LOINC_NOTICE, code_table
+
+    console = Console()
+    pack = _pack(None)
+    durable = importlib.util.find_spec("durable") is not None
+    console.print(f"fhiro2 {__version__}", highlight=False)
+    console.print(f"\n{INTENDED_USE}\n", highlight=False)
+    for line in EXCLUSIONS:
+        console.print(f"  {line}", highlight=False)
+    console.print(f"\nrules: {len(pack.rules)} in pack {pack.hash[:12]}; codes: {len(code_table())}", highlight=False)
+    console.print(f"evaluators: {evaluators(durable=durable)}", highlight=False)
+    console.print(f"\n{LOINC_NOTICE}", style="dim", highlight=False)
+
+
+def evaluators(*, durable: bool) -> str:
+    """Which rule evaluators run, in words."""
+    if durable:
+        return "built-in three-valued evaluator; durable-rules is installed and not yet used"
+    return "built-in three-valued evaluator alone; durable-rules is not installed"
+
+
+@contextmanager
+def _reading(inputs: list[str]) -> Iterator[list[NdjsonSource]]:
+    """The named sources, with progress on standard error once reading takes longer than two seconds."""
+    from fhiro2.read.ndjson import NdjsonSource
+
+    with _progress() as advance:
+        grouped: dict[str, list[Path]] = {}
+        for text in inputs:
+            name, found, path = text.partition("=")
+            named = found and "/" not in name
+            grouped.setdefault(name if named else "feed", []).append(Path(path if named else text))
+        sources = [NdjsonSource(name, paths, advance) for name, paths in grouped.items()]
+        advance.total = PASSES * sum(source.size() for source in sources)
+        yield sources
+
+
+class _Advance:
+    """Counts bytes read and shows them once two seconds have passed."""
+
+    def __init__(self, progress: Progress) -> None:
+        self.total = 0
+        self._progress = progress
+        self._started = time.monotonic()
+        self._done = 0
+        self._task: Any = None
+
+    def __call__(self, size: int) -> None:
+        self._done += size
+        if self._task is None and time.monotonic() - self._started > 2:
+            self._progress.start()
+            self._task = self._progress.add_task("reading", total=self.total)
+        if self._task is not None:
+            self._progress.update(self._task, completed=self._done)
+
+
+@contextmanager
+def _progress() -> Iterator[_Advance]:
+    progress = Progress(
+        TextColumn("{task.description}"),
+        BarColumn(),
+        TransferSpeedColumn(),
+        TimeRemainingColumn(),
+        console=Console(stderr=True),
+        transient=True,
+    )
+    try:
+        yield _Advance(progress)
+    finally:
+        progress.stop()
+
+
+def _settings(path: Path | None) -> Settings:
+    from fhiro2.settings import Settings, read_settings
+
+    return read_settings(path) if path else Settings()
+
+
+def _mapping(path: Path | None) -> Mapping:
+    from fhiro2.settings import NO_MAPPING, read_mapping
+
+    return read_mapping(path) if path else NO_MAPPING
+
+
+def _pack(folder: Path | None) -> Pack:
+    from fhiro2.judge import read_pack
+    from fhiro2.packaged import rules_folder
+
+    return read_pack(folder or rules_folder())
+
+
+def _load(path: Path) -> dict[str, Any]:
+    try:
+        found: dict[str, Any] = json.loads(path.read_text(encoding="utf-8"))
+    except (OSError, ValueError):
+        raise StopError(f"{path}: cannot be read; name the folder that a replay wrote") from None
+    return found
+
+
+def _print_json(content: Any) -> None:
+    sys.stdout.write(json.dumps(content, indent=2) + "\n")
+
+
+def main() -> None:
+    """Run a command; errors say what happened and what to do, and end with 2."""
+    try:
+        app()
+    except Fhiro2Error as error:
+        sys.stderr.write(f"fhiro2: {error}\n")
+        raise SystemExit(2) from None

@@ -1,0 +1,231 @@
+"""TIMELINE: resolve first, then order. Which version of each resource stands, and each patient's readings in order."""
+
+from __future__ import annotations
+
+import struct
+from collections.abc import Callable, Iterator, Mapping
+from dataclasses import dataclass, field
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+from fhiro2.catalogue import default_uncertainty
+from fhiro2.errors import Bucket, Reason
+from fhiro2.model import Fact, Integers, Names, Origins, Patient, Readings, Timelines, Truths
+
+_BUCKETS = tuple(Bucket)
+_REASONS = tuple(Reason)
+_BUCKET_NUMBER = {bucket: number for number, bucket in enumerate(_BUCKETS)}
+_REASON_NUMBER = {None: -1} | {reason: number for number, reason in enumerate(_REASONS)}
+_VERSION = np.dtype(
+    [
+        ("key", "i4"),
+        ("updated", "i8"),
+        ("number", "i8"),
+        ("text", "i4"),
+        ("digest", "i8"),
+        ("bucket", "i1"),
+        ("reason", "i1"),
+        ("origin", "i4"),
+        ("parts", "i4"),
+    ]
+)
+_ROW = struct.Struct("<iqqiqbbii")
+_NO_KEY = -1
+NEVER_UPDATED = -(2**62)
+MOST_PATIENTS = 2048  # a batch's time keys fit 63 bits: 11 bits of patient, 51 bits of microseconds
+
+
+@dataclass
+class Versions:
+    """One row a received resource version, in order of arrival: what it is, where it ended, what it gave."""
+
+    keys: dict[str, int] = field(default_factory=dict)
+    texts: dict[str, int] = field(default_factory=dict)
+    _packed: bytearray = field(default_factory=bytearray)
+    count: int = 0
+
+    def add(
+        self,
+        key: str,
+        version: str,
+        updated: int,
+        digest: int,
+        bucket: Bucket,
+        reason: Reason | None,
+        origin: int = -1,
+        parts: int = 0,
+    ) -> int:
+        """Add a version of the resource ``key`` ('' for one without identity) and return its row."""
+        number = self.keys.setdefault(key, len(self.keys)) if key else _NO_KEY
+        self._packed += _ROW.pack(
+            number,
+            updated,
+            int(version) if version.isascii() and version.isdigit() and len(version) < 19 else -1,
+            self.texts.setdefault(version, len(self.texts)) if version else -1,
+            digest,
+            _BUCKET_NUMBER[bucket],
+            _REASON_NUMBER[reason],
+            origin,
+            parts,
+        )
+        self.count += 1
+        return self.count - 1
+
+    def rows(self) -> NDArray[np.void]:
+        """All rows as one structured array."""
+        return np.frombuffer(bytes(self._packed), dtype=_VERSION).copy()
+
+
+@dataclass
+class Resolution:
+    """Which versions stand, and the final bucket and reason of every version."""
+
+    stands: Truths
+    bucket: NDArray[np.int8]
+    reason: NDArray[np.int8]
+    origin: NDArray[np.int32]
+
+    def standing(self, row: int) -> tuple[Bucket, Reason | None]:
+        """Bucket and reason of one version."""
+        reason = int(self.reason[row])
+        return _BUCKETS[int(self.bucket[row])], None if reason < 0 else _REASONS[reason]
+
+    def counts(self) -> Iterator[tuple[Bucket, Reason | None, int]]:
+        """How many versions ended in each bucket for each reason."""
+        pairs, numbers = np.unique(np.stack([self.bucket, self.reason]), axis=1, return_counts=True)
+        for (bucket, reason), number in zip(pairs.T.tolist(), numbers.tolist(), strict=True):
+            yield _BUCKETS[bucket], None if reason < 0 else _REASONS[reason], number
+
+
+def resolve(versions: Versions, content: Callable[[list[int]], Mapping[int, bytes]]) -> Resolution:
+    """Decide which version of each resource stands.
+
+    The winner is the greatest ``lastUpdated``, then the greatest versionId if both are integers, then the greatest
+    SHA-256 of the content. One version with two contents is quarantined whole. ``content`` gives the SHA-256 of the
+    canonical content of rows, and is asked only for rows that nothing else can tell apart.
+    """
+    rows = versions.rows()
+    bucket, reason = rows["bucket"].copy(), rows["reason"].copy()
+    stands = np.ones(len(rows), dtype=bool)
+    keyed = np.flatnonzero(rows["key"] != _NO_KEY)
+    order = keyed[np.lexsort((keyed, rows["number"][keyed], rows["updated"][keyed], rows["key"][keyed]))]
+    key = rows["key"][order]
+    starts = np.flatnonzero(np.r_[True, key[1:] != key[:-1]]) if len(order) else np.zeros(0, dtype=np.int64)
+    lengths = np.diff(np.r_[starts, len(order)])
+    for start, length in zip(starts[lengths > 1].tolist(), lengths[lengths > 1].tolist(), strict=True):
+        _resolve_one(rows, order[start : start + length], stands, bucket, reason, content)
+    return Resolution(stands, bucket, reason, rows["origin"])
+
+
+def _resolve_one(
+    rows: NDArray[np.void],
+    group: Integers,
+    stands: Truths,
+    bucket: NDArray[np.int8],
+    reason: NDArray[np.int8],
+    content: Callable[[list[int]], Mapping[int, bytes]],
+) -> None:
+    members = group.tolist()
+    differing = len({int(rows["digest"][row]) for row in members}) > 1
+    hashes: Mapping[int, bytes] = content(members) if differing else {}
+
+    def rank(row: int) -> tuple[int, int, bytes]:
+        return int(rows["updated"][row]), int(rows["number"][row]), hashes.get(row, b"")
+
+    def same(row: int) -> bytes | int:
+        return hashes[row] if differing else int(rows["digest"][row])
+
+    contents: dict[int, set[bytes | int]] = {}
+    for row in members:
+        if rows["text"][row] >= 0:
+            contents.setdefault(int(rows["text"][row]), set()).add(same(row))
+    torn = {row for row in members if len(contents.get(int(rows["text"][row]), ())) > 1}
+    for row in torn:
+        stands[row], bucket[row], reason[row] = False, _BUCKET_NUMBER[Bucket.QUARANTINED], _REASON_NUMBER[Reason.VERSION]
+    whole = [row for row in members if row not in torn]
+    if not whole:
+        return
+    winner = max(whole, key=rank)
+    for row in whole:
+        if row == winner:
+            continue
+        repeated = same(row) == same(winner) and rows["text"][row] == rows["text"][winner]
+        stands[row], bucket[row] = False, _BUCKET_NUMBER[Bucket.REPEATED]
+        reason[row] = _REASON_NUMBER[Reason.SAME_VERSION if repeated else Reason.SUPERSEDED]
+
+
+def panel_samples(readings: Readings, names: Names, origins: Origins, panels: Mapping[str, str]) -> None:
+    """Give members of a ``hasMember`` panel their panel as sample, where they have no nearer one (in place).
+
+    ``panels`` maps ``source|member id`` to the sample's name.
+    """
+    if not panels:
+        return
+    numbers = {name: number for number, name in enumerate(names.samples)}
+    for row in np.flatnonzero(readings["sample"] < 0).tolist():
+        source = names.subjects[readings["subject"][row]].partition("|")[0]
+        panel = panels.get(f"{source}|{origins.ids[readings['origin'][row]]}")
+        if panel is not None:
+            if panel not in numbers:
+                numbers[panel] = len(names.samples)
+                names.samples.append(panel)
+            readings["sample"][row] = numbers[panel]
+
+
+@dataclass(frozen=True)
+class Roster:
+    """What is known of patients: by subject as written, its root patient, birth and facts."""
+
+    root: Mapping[str, str]
+    born: Mapping[str, int | None]
+    facts: Mapping[str, tuple[Fact, ...]]
+
+
+def batches(
+    readings: Readings, names: Names, origins: Origins, roster: Roster, most_readings: int = 50_000
+) -> Iterator[Timelines]:
+    """Timelines of whole patients in the order of their keys, each batch near ``most_readings`` readings.
+
+    Readings of one patient are in order (effective, source, id, component). Raises nothing; order of arrival,
+    and how the input was split, leave no trace.
+    """
+    roots = [roster.root.get(subject, subject) for subject in names.subjects]
+    keys = sorted(set(roots))
+    number = {key: place for place, key in enumerate(keys)}
+    of_subject = np.array([number[root] for root in roots], dtype=np.int32)
+    patient = of_subject[readings["subject"]] if len(readings) else np.zeros(0, dtype=np.int32)
+    order = np.lexsort((readings["effective"], patient))
+    edges = np.searchsorted(patient[order], np.arange(len(keys) + 1))
+    first = 0
+    while first < len(keys):
+        last = int(np.searchsorted(edges, edges[first] + most_readings, side="right")) - 1
+        last = min(max(last, first + 1), first + MOST_PATIENTS, len(keys))
+        chosen = readings[order[edges[first] : edges[last]]]
+        chosen["patient"] = patient[order[edges[first] : edges[last]]] - first
+        yield _timelines(chosen, keys[first:last], names, origins, roster)
+        first = last
+
+
+def _timelines(
+    readings: Readings, keys: list[str], names: Names, origins: Origins, roster: Roster
+) -> Timelines:
+    identities = np.array([origins.ids[origin] for origin in readings["origin"].tolist()], dtype=np.str_)
+    _, tie = np.unique(identities, return_inverse=True)
+    readings = readings[np.lexsort((readings["part"], tie, readings["effective"], readings["patient"]))]
+    readings["uncertainty"] = default_uncertainty(readings["quantity"], _middle(readings))
+    patients = [_patient(key, roster) for key in keys]
+    return Timelines(readings, patients, [roster.facts.get(key, ()) for key in keys], names, origins)
+
+
+def _middle(readings: Readings) -> NDArray[np.float64]:
+    value: NDArray[Any] = readings["value"]
+    bound = np.where(np.isfinite(readings["high"]), readings["high"], readings["low"])
+    result: NDArray[np.float64] = np.where(np.isnan(value), bound, value)
+    return result
+
+
+def _patient(key: str, roster: Roster) -> Patient:
+    source, _, reference = key.partition("|")
+    return Patient(key, source, reference, roster.born.get(key))
