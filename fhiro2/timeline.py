@@ -28,10 +28,12 @@ _VERSION = np.dtype(
         ("bucket", "i1"),
         ("reason", "i1"),
         ("origin", "i4"),
-        ("parts", "i4"),
+        ("file", "i4"),
+        ("line", "i8"),
+        ("entry", "i4"),
     ]
 )
-_ROW = struct.Struct("<iqqiqbbii")
+_ROW = struct.Struct("<iqqiqbbiiqi")
 _NO_KEY = -1
 NEVER_UPDATED = -(2**62)
 MOST_PATIENTS = 2048  # a batch's time keys fit 63 bits: 11 bits of patient, 51 bits of microseconds
@@ -41,10 +43,10 @@ MOST_PATIENTS = 2048  # a batch's time keys fit 63 bits: 11 bits of patient, 51 
 class Versions:
     """One row a received resource version, in order of arrival: what it is, where it ended, what it gave."""
 
-    keys: dict[str, int] = field(default_factory=dict)
-    texts: dict[str, int] = field(default_factory=dict)
-    _packed: bytearray = field(default_factory=bytearray)
     count: int = 0
+    _keys: dict[str, int] = field(default_factory=dict)
+    _texts: dict[str, tuple[int, int]] = field(default_factory=dict)
+    _packed: bytearray = field(default_factory=bytearray)
 
     def add(
         self,
@@ -54,21 +56,23 @@ class Versions:
         digest: int,
         bucket: Bucket,
         reason: Reason | None,
-        origin: int = -1,
-        parts: int = 0,
+        origin: int,
+        place: tuple[int, int, int],
     ) -> int:
-        """Add a version of the resource ``key`` ('' for one without identity) and return its row."""
-        number = self.keys.setdefault(key, len(self.keys)) if key else _NO_KEY
+        """Add a version of the resource ``key`` ('' for one without identity), found at ``place``; return its row."""
+        keys = self._keys
+        text = self._texts.get(version)
+        if text is None:
+            text = self._texts[version] = _version_numbers(version, len(self._texts))
         self._packed += _ROW.pack(
-            number,
+            keys.setdefault(key, len(keys)) if key else _NO_KEY,
             updated,
-            int(version) if version.isascii() and version.isdigit() and len(version) < 19 else -1,
-            self.texts.setdefault(version, len(self.texts)) if version else -1,
+            *text,
             digest,
             _BUCKET_NUMBER[bucket],
             _REASON_NUMBER[reason],
             origin,
-            parts,
+            *place,
         )
         self.count += 1
         return self.count - 1
@@ -76,6 +80,12 @@ class Versions:
     def rows(self) -> NDArray[np.void]:
         """All rows as one structured array."""
         return np.frombuffer(bytes(self._packed), dtype=_VERSION).copy()
+
+
+def _version_numbers(version: str, place: int) -> tuple[int, int]:
+    """A versionId as a number (-1: not a whole number) and as the number of its text (-1: no version)."""
+    whole = version.isascii() and version.isdigit() and len(version) < 19
+    return int(version) if whole else -1, place if version else -1
 
 
 @dataclass

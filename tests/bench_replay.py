@@ -56,7 +56,7 @@ def lines(resources: int, seed: int = 1) -> Iterator[bytes]:
     start = datetime(2026, 1, 1, tzinfo=UTC)
     for number in range(resources):
         patient, place = divmod(number, PER_PATIENT)
-        hour, member = divmod(place, 14)
+        hour, member = divmod(place, 20)
         moment = start + timedelta(minutes=60 * hour + patient % 50)
         gas = member < len(GAS)
         code, name, unit, low, high = GAS[member] if gas else MONITOR[(member - len(GAS)) % len(MONITOR)]

@@ -9,6 +9,8 @@ import re
 from functools import lru_cache
 from typing import Any, Final, NamedTuple
 
+import msgspec
+
 from fhiro2.admit.coding import SATURATION_OR_PULSE, Coder
 from fhiro2.admit.context import Context, Interpreter, SpecimenEntry
 from fhiro2.admit.moment import moment
@@ -45,7 +47,7 @@ class Admission(NamedTuple):
     parts: tuple[tuple[int, SkipError], ...] = ()
 
 
-class _Setting(NamedTuple):
+class _Setting(msgspec.Struct, frozen=True, gc=False):
     """What holds for all values of one resource."""
 
     subject: int
@@ -147,7 +149,7 @@ class Admitter:
                     out_of_scope = error
         clashing = _clashing(admitted)
         if any(code.quantity == "po2" for _, _, code, _ in admitted):
-            setting = setting._replace(laboratory=True)
+            setting = msgspec.structs.replace(setting, laboratory=True)
         for number, part, code, value in admitted:
             if (code.quantity, code.specimen) in clashing:
                 refused.append((number, SkipError(Reason.CONFLICT, "one quantity twice with different values")))
@@ -164,41 +166,50 @@ class Admitter:
     def _setting(self, found: Observation) -> _Setting:
         subject = self._subject(found)
         effective, cautions = self._effective(found)
-        known = effective
-        for text in (found.meta.lastUpdated if found.meta else None, found.issued):
-            if text is not None:
-                known = moment(text, self._zone)[0]
-                break
+        issued = None if found.issued is None else moment(found.issued, self._zone)[0]
+        meta = found.meta
+        if meta is not None and meta.lastUpdated is not None:
+            known = moment(meta.lastUpdated, self._zone)[0]
+        else:
+            known = effective if issued is None else issued
         if effective > known + FUTURE:
             raise SkipError(Reason.TIME, "later than it was known")
-        if found.issued is not None and moment(found.issued, self._zone)[0] < effective:
+        if issued is not None and issued < effective:
             cautions |= int(Caution.TIME_ORDER)
-        specimen = self._specimen(found)
-        sample = ""
-        if specimen is not None and specimen.accession:
-            sample = f"accession {specimen.accession}"
-        elif found.specimen is not None and found.specimen.reference:
-            contained = found.specimen.reference.startswith("#")
-            sample = f"specimen {found.id if contained else ''}{found.specimen.reference}"
-        elif found.component or found.hasMember:
-            sample = f"panel {found.id}"
-        categories = [coding.code for row in found.category for coding in row.coding if coding.system == OBSERVATION_CATEGORY]
-        rows = self._rows
-        version = found.meta.versionId if found.meta and found.meta.versionId else ""
+        specimen = None if found.specimen is None else self._specimen(found)
+        laboratory, vital_sign = found.specimen is not None, False
+        for row in found.category:
+            for coding in row.coding:
+                if coding.system == OBSERVATION_CATEGORY:
+                    laboratory |= coding.code == "laboratory"
+                    vital_sign |= coding.code == "vital-signs"
+        rows, source = self._rows, self._source
+        device = "" if found.device is None else found.device.reference or ""
+        sample = self._sample(found, specimen)
+        version = meta.versionId if meta is not None and meta.versionId else ""
         return _Setting(
             subject,
             effective,
             known,
             cautions,
-            rows.encounters.number(_plain(found.encounter, "Encounter")),
-            rows.devices.number(f"{self._source}|{found.device.reference}" if found.device else ""),
-            rows.samples.number(f"{self._source}|{sample}" if sample else ""),
+            rows.encounters.number(_plain(found.encounter, "Encounter/")),
+            rows.devices.number(f"{source}|{device}") if device else -1,
+            rows.samples.number(f"{source}|{sample}") if sample else -1,
             rows.origin(found.id or "", version, "" if version else _content_hash(found)),
             specimen.kind if specimen else Specimen.UNKNOWN,
             self._body_site(found, specimen),
-            "laboratory" in categories or found.specimen is not None,
-            "vital-signs" in categories,
+            laboratory,
+            vital_sign,
         )
+
+    def _sample(self, found: Observation, specimen: SpecimenEntry | None) -> str:
+        """The name of the sample that ``found`` says it belongs to: accession, specimen or panel; else ''."""
+        if specimen is not None and specimen.accession:
+            return f"accession {specimen.accession}"
+        if found.specimen is not None and found.specimen.reference:
+            contained = found.specimen.reference.startswith("#")
+            return f"specimen {found.id if contained else ''}{found.specimen.reference}"
+        return f"panel {found.id}" if found.component or found.hasMember else ""
 
     def _add(self, setting: _Setting, code: Code, value: Value, part: int, component: Component | None) -> None:
         quantity, kind, cautions = code.quantity, code.kind, setting.cautions | value.cautions
@@ -292,13 +303,14 @@ class Admitter:
         raise SkipError(Reason.SUBJECT, "the subject's identifier names no patient, or several")
 
     def _effective(self, found: Observation) -> tuple[int, int]:
-        stated = (found.effectiveDateTime, found.effectiveInstant, found.effectivePeriod, found.effectiveTiming)
+        text, period = found.effectiveDateTime, found.effectivePeriod
+        if period is None and found.effectiveInstant is None and found.effectiveTiming is None and text is not None:
+            return moment(text, self._zone)
+        stated = (text, found.effectiveInstant, period, found.effectiveTiming)
         if sum(one is not None for one in stated) > 1:
             raise SkipError(Reason.INVARIANT, "more than one effective[x]")
-        text = found.effectiveDateTime or found.effectiveInstant
-        if text is not None:
-            return moment(text, self._zone)
-        period = found.effectivePeriod
+        if found.effectiveInstant is not None:
+            return moment(found.effectiveInstant, self._zone)
         if period is None or period.start is None:
             raise SkipError(Reason.TIME, "no time that can be paired")
         start, caution = moment(period.start, self._zone)
@@ -352,10 +364,11 @@ def _check_identity(found: Observation) -> None:
 
 def is_own(identifiers: Any) -> bool:
     """Whether one of a resource's identifiers is of this program's own systems."""
-    return isinstance(identifiers, (list, tuple)) and any(
-        isinstance(row, dict) and isinstance(row.get("system"), str) and row["system"].startswith(IDENTIFIERS)
-        for row in identifiers
-    )
+    if isinstance(identifiers, (list, tuple)):
+        for row in identifiers:
+            if type(row) is dict and str(row.get("system")).startswith(IDENTIFIERS):
+                return True
+    return False
 
 
 @lru_cache(maxsize=None)
@@ -390,7 +403,7 @@ def _contained(found: Observation, reference: str) -> dict[str, Any] | None:
 
 def _plain(reference: Reference | None, kind: str) -> str:
     text = reference.reference if reference and reference.reference else ""
-    return text if text.startswith(f"{kind}/") else ""
+    return text if text.startswith(kind) else ""
 
 
 def _content_hash(found: Observation) -> str:

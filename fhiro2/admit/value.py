@@ -4,8 +4,9 @@ from __future__ import annotations
 
 import re
 from collections.abc import Mapping as Map
-from dataclasses import dataclass
 from typing import Final
+
+import msgspec
 
 from fhiro2.catalogue import MEASURED_BY_NAME
 from fhiro2.codes import ANSWERS, Code
@@ -24,8 +25,7 @@ _COMPARATORS: Final = frozenset({"<", "<=", ">", ">="})
 _NOT_MEASURED: Final = re.compile(r"clotted|err(or)?|-{2,}|nan|n/?a|not measured|no result|insufficient", re.IGNORECASE)
 
 
-@dataclass(frozen=True, slots=True)
-class Value:
+class Value(msgspec.Struct, frozen=True, gc=False):
     """A value in canonical units: ``low`` < ``high`` where only a bound is known; all NaN for a stated absence."""
 
     value: float = NAN

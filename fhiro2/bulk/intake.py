@@ -2,8 +2,8 @@
 
 from __future__ import annotations
 
+import gc
 import hashlib
-from array import array
 from collections.abc import Callable, Iterator, Sequence
 from dataclasses import dataclass, field
 from typing import Any, NamedTuple
@@ -58,14 +58,8 @@ class _Book:
 
     source: Source
     versions: Versions = field(default_factory=Versions)
-    files: array[int] = field(default_factory=lambda: array("i"))
-    lines: array[int] = field(default_factory=lambda: array("q"))
-    entries: array[int] = field(default_factory=lambda: array("i"))
 
     def add(self, unit: _Unit, label: _Label, admission: Admission, origin: int = -1) -> int:
-        self.files.append(unit.raw.file)
-        self.lines.append(unit.raw.line)
-        self.entries.append(unit.entry)
         return self.versions.add(
             label.key,
             label.version,
@@ -74,13 +68,14 @@ class _Book:
             admission.bucket,
             admission.reason,
             origin,
-            len(admission.parts),
+            (unit.raw.file, unit.raw.line, unit.entry),
         )
 
     def hashes(self, rows: list[int]) -> dict[int, bytes]:
         """SHA-256 of the canonical content of some rows, read again from their places."""
-        wanted = {(self.files[row], self.lines[row], self.entries[row]): row for row in rows}
-        touched = {(self.files[row], self.lines[row]) for row in rows}
+        places = self.versions.rows()[["file", "line", "entry"]][rows].tolist()
+        wanted = dict(zip(places, rows, strict=True))
+        touched = {place[:2] for place in places}
         found: dict[int, bytes] = {}
         for raw in self.source.read():
             if (raw.file, raw.line) in touched:
@@ -99,6 +94,9 @@ class _Label(NamedTuple):
     updated: int
 
 
+_COLLECT_EVERY = 200_000
+"""New objects between two garbage collections while reading: rows make no cycles, and looking for them costs a tenth."""
+
 Watch = Callable[[Observation, Admission], None]
 
 
@@ -113,6 +111,21 @@ def take_in(
 
     ``watch`` sees each Observation that could be read, with what became of it.
     """
+    thresholds = gc.get_threshold()
+    gc.set_threshold(_COLLECT_EVERY, *thresholds[1:])
+    try:
+        return _take_in(sources, settings, mapping, quarantine, watch)
+    finally:
+        gc.set_threshold(*thresholds)
+
+
+def _take_in(
+    sources: Sequence[Source],
+    settings: Settings,
+    mapping: Mapping,
+    quarantine: Quarantine | None,
+    watch: Watch | None,
+) -> Intake:
     zone = settings.zone or mapping.zone
     interpreter = Interpreter(mapping, zone)
     coder = Coder(_site_codes(mapping))
@@ -148,7 +161,7 @@ def _context(
     book, context = _Book(source), Context()
     stated: dict[int, tuple[str, Entry]] = {}
     excluded: dict[int, str] = {}
-    for raw in source.read():
+    for raw in source.read(leave_out=_OBSERVATION):
         if raw.content.startswith(_OBSERVATION) and raw.fault is not Reason.SIZE:
             continue
         for unit in _units(raw):

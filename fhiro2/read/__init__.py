@@ -22,5 +22,5 @@ class Source(Protocol):
 
     name: str
 
-    def read(self) -> Iterator[Raw]:
-        """All raw resources, in any order; may be called again and then gives the same."""
+    def read(self, leave_out: bytes | None = None) -> Iterator[Raw]:
+        """All raw resources but whole lines that begin with ``leave_out``, in any order; the same when called again."""

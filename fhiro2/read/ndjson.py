@@ -16,7 +16,8 @@ MOST_FILE = 200_000_000  # a single JSON file (a Bundle) is read whole
 MOST_EXPANSION = 200  # a gzip file that grows more than this is a bomb
 _SMALL = 64_000_000
 _ENDINGS = (".ndjson", ".ndjson.gz", ".jsonl", ".jsonl.gz", ".json")
-_CHUNK = 1 << 16
+_CHUNK = 1 << 20
+_MARK = b"\xef\xbb\xbf"
 
 
 class NdjsonSource:
@@ -31,16 +32,16 @@ class NdjsonSource:
         """Bytes on disk."""
         return sum(file.stat().st_size for file in self.files)
 
-    def read(self) -> Iterator[Raw]:
+    def read(self, leave_out: bytes | None = None) -> Iterator[Raw]:
         """All lines that hold anything, with their place; blank lines count nothing."""
         for number, file in enumerate(self.files):
             if file.name.endswith(".json"):
                 yield from self._whole(number, file)
             elif file.name.endswith(".gz"):
-                yield from self._zipped(number, file)
+                yield from self._zipped(number, file, leave_out)
             else:
                 with file.open("rb", buffering=1 << 20) as stream:
-                    yield from self._lines(number, stream)
+                    yield from self._lines(number, stream, leave_out)
 
     def _whole(self, number: int, file: Path) -> Iterator[Raw]:
         size = file.stat().st_size
@@ -48,47 +49,51 @@ class NdjsonSource:
         if size > MOST_FILE:
             yield Raw(b"", number, 1, Reason.SIZE)
             return
-        content = file.read_bytes().removeprefix(b"\xef\xbb\xbf").strip()
+        content = file.read_bytes().removeprefix(_MARK).strip()
         if content:
             yield Raw(content, number, 1)
 
-    def _zipped(self, number: int, file: Path) -> Iterator[Raw]:
+    def _zipped(self, number: int, file: Path, leave_out: bytes | None) -> Iterator[Raw]:
         most = max(_SMALL, MOST_EXPANSION * file.stat().st_size)
         line = 0
         with gzip.open(file, "rb") as stream:
             try:
-                for raw in self._lines(number, cast(BinaryIO, stream), most):
+                for raw in self._lines(number, cast(BinaryIO, stream), leave_out, most):
                     line = raw.line
                     yield raw
             except (EOFError, OSError, zlib.error):
                 yield Raw(b"", number, line + 1, Reason.TRUNCATED)
 
-    def _lines(self, number: int, stream: BinaryIO, most: int | None = None) -> Iterator[Raw]:
+    def _lines(
+        self, number: int, stream: BinaryIO, leave_out: bytes | None, most: int | None = None
+    ) -> Iterator[Raw]:
         """Lines of one stream; a line over the cap is passed over without holding it."""
-        line = total = unreported = 0
+        line = total = reported = 0
         while content := stream.readline(MOST_LINE + 1):
             line += 1
             total += len(content)
-            unreported += len(content)
-            if unreported > _CHUNK:
-                self._progress(unreported)
-                unreported = 0
+            if total - reported > _CHUNK:
+                self._progress(total - reported)
+                reported = total
             if line == 1:
-                content = content.removeprefix(b"\xef\xbb\xbf")
+                content = content.removeprefix(_MARK)
             if most is not None and total > most:
                 yield Raw(b"", number, line, Reason.SIZE)
                 return
-            if len(content) > MOST_LINE and not content.endswith(b"\n"):
+            whole = content.endswith(b"\n")
+            if not whole and len(content) > MOST_LINE:
                 passed, ended = _pass_over(stream, None if most is None else most - total)
                 total += passed
                 yield Raw(content[:200], number, line, Reason.SIZE)
                 if not ended:
                     return
                 continue
-            stripped = content.strip(b" \t\r\n")
+            if leave_out is not None and whole and content.startswith(leave_out):
+                continue
+            stripped = content.strip()
             if stripped:
-                yield Raw(stripped, number, line, None if content.endswith(b"\n") else Reason.TRUNCATED)
-        self._progress(unreported)
+                yield Raw(stripped, number, line, None if whole else Reason.TRUNCATED)
+        self._progress(total - reported)
 
 
 def _pass_over(stream: BinaryIO, most: int | None) -> tuple[int, bool]:

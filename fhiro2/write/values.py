@@ -53,10 +53,11 @@ class _Anchors:
 
 @dataclass
 class _Input:
-    """One input of an anchor table in a block: its origin (-1: none), its words, when it was known."""
+    """One input of an anchor table in a block: origin (-1: none), words, ``derivedFrom`` entry, when it was known."""
 
     origin: Integers
     text: list[str]
+    entry: list[str]
     known: Integers
 
 
@@ -173,23 +174,18 @@ def _render(
     at = rows + anchors.span.start
     forms, numbers = _numbers(code, column, at)
     doubts = _doubts(code, column.uncertainty[at])
-    used, issued = _used(outcome, anchors, column, rows, inputs)
+    used, issued = _used(outcome, anchors, column, rows, inputs, entities)
     cautions = column.cautions[at].tolist()
     bases = column.constants[at].tolist() if column.constants is not None else [0] * len(rows)
-    source, references = source_shape(), entities.references
     history = provenance_shape(run, "Observation", f"{systems.FORMULA}/{DERIVED_BY_CODE[code].formula}")
-    stems, context, effective, origin = anchors.stems, anchors.context, anchors.effective, anchors.origin
+    stems, context, effective = anchors.stems, anchors.context, anchors.effective
+    sources_of = _Sources(anchors.origin, used, entities)
     ids, lines, hashes, provenance = found.ids, found.lines, found.hashes, found.provenance
     for number, i in enumerate(rows.tolist()):
-        words: dict[int, str] = {origin[i]: ""}
-        for origins, texts in used:
-            place = origins[i]
-            if place >= 0:
-                words[place] = f"{words[place]}, {texts[i]}" if words.get(place) else texts[i]
         identity, doubt, where, when = named(stems[i] + code), doubts[number], context[i], effective[i]
         noted = notes(cautions[number])
         form = observation_shape(code, bases[number], len(where) == 2, forms[number], doubt != (), noted != ())
-        sources = ",".join([source.filled((references[place], text or "anchor")) for place, text in words.items()])
+        sources, origins = sources_of.at(i)
         line = form.filled(
             (identity, *doubt, identity, *where, when, issued[number], *numbers[number], *noted, sources)
         ).encode()
@@ -197,9 +193,44 @@ def _render(
         ids.append(identity)
         lines.append(line)
         hashes.append(content_hash)
-        origins_used = ",".join([entities[place] for place in words])
-        provenance.append(history.filled((provenance_of(identity, content_hash), identity, when, origins_used)))
+        provenance.append(history.filled((provenance_of(identity, content_hash), identity, when, origins)))
     return [anchors.rank[i] * len(_ORDER) + _ORDER[code] for i in rows.tolist()]
+
+
+class _Sources:
+    """The ``derivedFrom`` entries and the Provenance entities of one column's values, anchor by anchor."""
+
+    def __init__(self, anchor: list[int], used: list[tuple[list[int], _Input]], entities: Entities) -> None:
+        self._anchor = anchor
+        self._used = [(origins, found.entry, found.text) for origins, found in used]
+        self._entities = entities
+
+    def at(self, i: int) -> tuple[str, str]:
+        """Both lists for the ``i``-th anchor: the anchor's Observation first, each Observation once."""
+        anchor = self._anchor[i]
+        entries: dict[int, str] = {anchor: ""}
+        for origins, entry, _ in self._used:
+            place = origins[i]
+            if place >= 0:
+                if entries.get(place):
+                    entries = self._merged(i)
+                    break
+                entries[place] = entry[i]
+        if not entries[anchor]:
+            entries[anchor] = source_shape().filled((self._entities.references[anchor], "anchor"))
+        return ",".join(entries.values()), ",".join([self._entities[place] for place in entries])
+
+    def _merged(self, i: int) -> dict[int, str]:
+        """Entries where inputs are parts of one Observation: their words stand in one entry."""
+        words: dict[int, str] = {self._anchor[i]: ""}
+        for origins, _, text in self._used:
+            place = origins[i]
+            if place >= 0:
+                words[place] = f"{words[place]}, {text[i]}" if words.get(place) else text[i]
+        references = self._entities.references
+        return {
+            place: source_shape().filled((references[place], text)) if text else "" for place, text in words.items()
+        }
 
 
 def _sorted(found: Written, order: list[int]) -> Written:
@@ -213,24 +244,29 @@ def _sorted(found: Written, order: list[int]) -> Written:
 
 
 def _used(
-    outcome: Outcome, anchors: _Anchors, column: Column, rows: Integers, inputs: dict[str, _Input]
-) -> tuple[list[tuple[list[int], list[str]]], list[str]]:
-    """The origins and words of each input, and when each value in ``rows`` became knowable."""
+    outcome: Outcome,
+    anchors: _Anchors,
+    column: Column,
+    rows: Integers,
+    inputs: dict[str, _Input],
+    entities: Entities,
+) -> tuple[list[tuple[list[int], _Input]], list[str]]:
+    """Each input with its origins where it was used, and when each value in ``rows`` became knowable."""
     used = []
     known: Integers = anchors.table.known[anchors.span]
     for bit, name in enumerate(column.inputs):
         if name not in inputs:
-            inputs[name] = _input(outcome, anchors, name)
+            inputs[name] = _input(outcome, anchors, name, entities)
         found = inputs[name]
         origin = found.origin
         if column.used is not None:
             origin = np.where(column.used[anchors.span] >> bit & 1, origin, -1)
         known = np.where(origin >= 0, np.maximum(known, found.known), known)
-        used.append((origin.tolist(), found.text))
+        used.append((origin.tolist(), found))
     return used, instants(known[rows])
 
 
-def _input(outcome: Outcome, anchors: _Anchors, name: str) -> _Input:
+def _input(outcome: Outcome, anchors: _Anchors, name: str, entities: Entities) -> _Input:
     timelines = outcome.timelines
     column = anchors.table.columns[name]
     source, runner_up = column.source[anchors.span], column.runner_up[anchors.span]
@@ -244,7 +280,13 @@ def _input(outcome: Outcome, anchors: _Anchors, name: str) -> _Input:
     for place in np.flatnonzero(there & (runner_up >= 0)).tolist():
         next_nearest = ids[timelines.readings["origin"][runner_up[place]]]
         text[place] += f"; next nearest Observation/{next_nearest}"
-    return _Input(origin, [quoted(words) for words in text], rows["known"])
+    text = [quoted(words) for words in text]
+    filled, references = source_shape().filled, entities.references
+    entry = [
+        filled((references[place], words)) if place >= 0 else ""
+        for place, words in zip(origin.tolist(), text, strict=True)
+    ]
+    return _Input(origin, text, entry, rows["known"])
 
 
 def _numbers(code: str, column: Column, at: Integers) -> tuple[list[int], list[tuple[str, ...]]]:

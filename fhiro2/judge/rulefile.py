@@ -1,0 +1,279 @@
+"""Rule files: one strict YAML file a rule, with its cases; a pack is a folder of them, hashed."""
+
+from __future__ import annotations
+
+import hashlib
+import json
+from collections.abc import Iterator
+from dataclasses import dataclass
+from datetime import date
+from difflib import get_close_matches
+from functools import cached_property
+from itertools import pairwise
+from pathlib import Path
+from string import Formatter
+from typing import Annotated, Any, Literal, Self
+
+from pydantic import BaseModel, BeforeValidator, ConfigDict, Field, StringConstraints, model_validator
+
+from fhiro2.catalogue import DERIVED_BY_CODE, INPUT_BY_NAME
+from fhiro2.documents import Marks, parse, validated
+from fhiro2.errors import SkipError, StopError
+from fhiro2.judge.condition import AllOf, AnyOf, Condition, Not, Operator, canonical, comparison, quantities
+
+TIME = "time"
+Place = tuple[str | int, ...]
+Text = Annotated[str, StringConstraints(min_length=1)]
+Number = Annotated[float, Field(allow_inf_nan=False)]
+
+
+def _date(text: Any) -> Any:
+    return date.fromisoformat(text) if isinstance(text, str) else text
+
+
+class _Frozen(BaseModel):
+    model_config = ConfigDict(frozen=True, extra="forbid", strict=True)
+
+
+class Clause(_Frozen):
+    """A node of a condition as written: a group (any, all, not) or a comparison of one quantity."""
+
+    any_of: tuple[Clause, ...] | None = Field(None, alias="any", min_length=1)
+    all_of: tuple[Clause, ...] | None = Field(None, alias="all", min_length=1)
+    negated: Clause | None = Field(None, alias="not")
+    quantity: str | None = None
+    below: Number | None = None
+    above: Number | None = None
+    at_most: Number | None = None
+    at_least: Number | None = None
+    unit: str | None = None
+
+    @model_validator(mode="after")
+    def _has_one_shape(self) -> Self:
+        given = self.model_fields_set
+        if any(getattr(self, name) is None for name in given):
+            raise ValueError("a key without a value; fill it in or remove it")
+        if given & {"any_of", "all_of", "negated"}:
+            if len(given) > 1:
+                raise ValueError("any, all or not stands alone; nest what is beside it")
+        elif len(given) != 3 or not given > {"quantity", "unit"}:
+            operators = ", ".join(Operator)
+            raise ValueError(f"a comparison needs quantity, unit and one of {operators}")
+        else:
+            _check_unit(str(self.quantity), str(self.unit))
+        return self
+
+    @cached_property
+    def condition(self) -> Condition:
+        """The same in canonical units."""
+        if self.any_of is not None:
+            return AnyOf(tuple(part.condition for part in self.any_of))
+        if self.all_of is not None:
+            return AllOf(tuple(part.condition for part in self.all_of))
+        if self.negated is not None:
+            return Not(self.negated.condition)
+        how = next(one for one in Operator if one in self.model_fields_set)
+        return comparison(str(self.quantity), how, getattr(self, how), str(self.unit))
+
+    def units(self) -> Iterator[tuple[str, str]]:
+        """Each quantity with the unit that it is compared in, in the order written."""
+        if self.quantity is not None and self.unit is not None:
+            yield self.quantity, self.unit
+        for part in (*(self.any_of or ()), *(self.all_of or ()), *((self.negated,) if self.negated else ())):
+            yield from part.units()
+
+
+class AgeLimit(_Frozen):
+    """Completed years of life from which a rule applies."""
+
+    least: int = Field(ge=0, le=130)
+
+
+class Scope(_Frozen):
+    """Whom a rule speaks of; a patient of unknown age is not evaluated."""
+
+    age_years: AgeLimit
+
+
+class Source(_Frozen):
+    """Where a limit comes from."""
+
+    text: Text
+    year: int = Field(ge=1500, le=2200)
+    kind: Literal["published", "common practice", "from memory"]
+
+
+class Given(_Frozen):
+    """A value in a case, with its standard uncertainty, in ``unit``."""
+
+    value: Number
+    unit: str
+    uncertainty: Number = Field(ge=0)
+
+
+class Moment(BaseModel):
+    """The values of a case at one time, by quantity; a quantity left out is missing, an age left out unknown."""
+
+    model_config = ConfigDict(frozen=True, extra="allow", strict=True)
+    __pydantic_extra__: dict[str, Given]
+
+    after_minutes: int = Field(ge=0)
+    age_years: Number | None = Field(None, ge=0)
+
+    @property
+    def values(self) -> dict[str, Given]:
+        """The values by quantity."""
+        return self.__pydantic_extra__
+
+
+class Case(_Frozen):
+    """What a rule must find at the last of some moments; ``message`` is its exact text where a flag is expected."""
+
+    name: Text
+    given: tuple[Moment, ...] = Field(min_length=1)
+    expect: Literal["flag", "none", "unknown", "cleared"]
+    message: Text | None = None
+
+
+class Rule(_Frozen):
+    """One rule as its team wrote it; ``raises`` and ``clears`` are its conditions in canonical units."""
+
+    id: Annotated[str, StringConstraints(pattern=r"^[a-z0-9]+(-[a-z0-9]+)*$")]
+    version: int = Field(ge=1)
+    title: Text
+    axis: Literal["gas", "carrier", "flow", "use", "data-quality"]
+    severity: Literal["info", "warning", "critical"]
+    state: Literal["draft", "shadow", "limited", "live", "retired"]
+    owner: Text
+    review_by: Annotated[date, BeforeValidator(_date)]
+    intent: Text
+    at: Literal["arterial", "mixed-venous", "central-venous", "pulse-oximetry", "cardiac-output", "body"]
+    scope: Scope
+    raise_when: Clause = Field(alias="raise")
+    clear_when: Clause = Field(alias="clear")
+    message: Text
+    cautions: tuple[Text, ...] = Field(min_length=1)
+    sources: tuple[Source, ...] = Field(min_length=1)
+    cases: tuple[Case, ...] = Field(min_length=1)
+
+    @property
+    def raises(self) -> Condition:
+        """Where the rule raises a flag."""
+        return self.raise_when.condition
+
+    @property
+    def clears(self) -> Condition:
+        """Where the rule clears it."""
+        return self.clear_when.condition
+
+    @cached_property
+    def units(self) -> dict[str, str]:
+        """The unit in which each quantity is shown: that of the first condition on it."""
+        return dict(reversed([*self.raise_when.units(), *self.clear_when.units()]))
+
+
+@dataclass(frozen=True)
+class Pack:
+    """The rules of a folder by id, the file of each within it, and the SHA-256 of what they say."""
+
+    rules: tuple[Rule, ...]
+    files: tuple[str, ...]
+    hash: str
+
+
+def read_pack(folder: Path) -> Pack:
+    """All rules below ``folder``; raises StopError with ``file:line:column`` and what to do for every mistake."""
+    if not folder.is_dir():
+        raise StopError(f"{folder}: not a folder; name the folder of the rules")
+    found: dict[str, tuple[Rule, str]] = {}
+    mistakes = [f"{path}:1:1: not read; end the name in .yaml" for path in sorted(folder.rglob("*.yml"))]
+    for path in sorted(folder.rglob("*.yaml")):
+        name = path.relative_to(folder).as_posix()
+        try:
+            rule = read_rule(path)
+        except StopError as error:
+            mistakes.append(str(error))
+            continue
+        if rule.id in found:
+            mistakes.append(f"{path}:1:1: the rule {rule.id} is also in {found[rule.id][1]}; remove one")
+        found[rule.id] = rule, name
+    if mistakes:
+        raise StopError("\n".join(mistakes))
+    if not found:
+        raise StopError(f"{folder}: holds no rule; name a folder with rule files (*.yaml)")
+    rules = tuple(found[name][0] for name in sorted(found))
+    content = [rule.model_dump(mode="json", by_alias=True, exclude_unset=True) for rule in rules]
+    canonical_content = json.dumps(content, sort_keys=True, ensure_ascii=False, separators=(",", ":"))
+    digest = hashlib.sha256(canonical_content.encode()).hexdigest()
+    return Pack(rules, tuple(found[rule.id][1] for rule in rules), digest)
+
+
+def read_rule(path: Path) -> Rule:
+    """The rule in one file; raises StopError with ``file:line:column`` and what to do for every mistake."""
+    try:
+        content = path.read_bytes()
+    except OSError as error:
+        raise StopError(f"{path}: cannot be read ({error.strerror}); check the path and its rights") from None
+    value, marks = parse(content, str(path))
+    rule = validated(value, marks, str(path), Rule)
+    mistakes = [*_identity(rule, path.stem), *_message(rule), *_cases(rule)]
+    if mistakes:
+        raise StopError("\n".join(_placed(str(path), marks, place, text) for place, text in mistakes))
+    return rule
+
+
+def _placed(name: str, marks: Marks, place: Place, text: str) -> str:
+    line, column = marks[place]
+    return f"{name}:{line}:{column}: {'.'.join(map(str, place))}: {text}"
+
+
+def _identity(rule: Rule, stem: str) -> Iterator[tuple[Place, str]]:
+    if rule.id != stem:
+        yield ("id",), f"must be the file's name, {stem!r}; rename one of them"
+
+
+def _message(rule: Rule) -> Iterator[tuple[Place, str]]:
+    allowed = {TIME, *quantities(rule.raises)}
+    try:
+        parts = list(Formatter().parse(rule.message))
+    except ValueError as error:
+        yield ("message",), f"{error}; write a brace that is meant as such twice"
+        return
+    for _, name, form, conversion in parts:
+        if name is not None and (name not in allowed or form or conversion):
+            yield ("message",), f"{{{name}}} is not one of {', '.join(sorted(allowed))}, or is not plain; change it"
+
+
+def _cases(rule: Rule) -> Iterator[tuple[Place, str]]:
+    for kind in ("flag", "none", "unknown"):
+        if all(case.expect != kind for case in rule.cases):
+            yield ("cases",), f"no case expects {kind!r}; add one"
+    names = [case.name for case in rule.cases]
+    for number, case in enumerate(rule.cases):
+        place: Place = ("cases", number)
+        if case.name in names[:number]:
+            yield (*place, "name"), "another case has this name; change one"
+        if (case.message is not None) != (case.expect == "flag"):
+            yield place, "a case has a message if, and only if, it expects a flag"
+        for earlier, later in pairwise(case.given):
+            if later.after_minutes <= earlier.after_minutes or later.age_years != earlier.age_years:
+                yield (*place, "given"), "the moments must follow each other, all with the same age_years"
+        for step, moment in enumerate(case.given):
+            for name, given in moment.values.items():
+                try:
+                    if name not in rule.units:
+                        raise ValueError(f"the rule does not ask for it, only for {', '.join(rule.units)}")
+                    _check_unit(name, given.unit)
+                except ValueError as error:
+                    yield (*place, "given", step, name), f"{error}; change it"
+
+
+def _check_unit(quantity: str, unit: str) -> None:
+    try:
+        canonical(quantity, unit)
+    except KeyError:
+        names = [*INPUT_BY_NAME, *DERIVED_BY_CODE]
+        near = get_close_matches(quantity, names, 3) or names
+        raise ValueError(f"no quantity {quantity!r}; write one of {', '.join(near)}") from None
+    except SkipError as error:
+        raise ValueError(f"unit of {quantity}: {error.detail}; write its UCUM code") from None
