@@ -1,4 +1,4 @@
-"""Commands, nothing else. Exit codes: 0 done, 1 done with findings that need a look, 2 refused to start or to go on."""
+"""Commands, nothing else. Exit: 0 done, 1 done with findings that need a look, 2 refused to start or to go on."""
 
 from __future__ import annotations
 

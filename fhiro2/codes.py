@@ -86,7 +86,7 @@ def read_table(text: str, name: str) -> Mapping[tuple[str, str], Code]:
 
 
 def check_digit(loinc: str) -> bool:
-    """Whether the last digit of a LOINC code is its mod-10 check digit (LOINC users' guide, appendix on check digits)."""
+    """Whether the last digit of a LOINC code is its mod-10 check digit (LOINC users' guide)."""
     number, _, digit = loinc.partition("-")
     if not (number.isdigit() and len(digit) == 1 and digit.isdigit()):
         return False
@@ -139,5 +139,3 @@ def _flag(text: str) -> bool:
     if text not in ("0", "1"):
         raise ValueError(f"{text!r} is neither 0 nor 1")
     return text == "1"
-
-

@@ -90,7 +90,8 @@ def _check_bytes(content: bytes, name: str) -> None:
 def _check_events(text: str, name: str) -> None:
     depth = 0
     for event in yaml.parse(text, Loader=yaml.SafeLoader):
-        place = f"{name}:{event.start_mark.line + 1}:{event.start_mark.column + 1}"
+        mark = event.start_mark
+        place = f"{name}:{mark.line + 1}:{mark.column + 1}" if mark else name
         if isinstance(event, yaml.AliasEvent) or getattr(event, "anchor", None) is not None:
             raise StopError(f"{place}: anchors and aliases are not allowed; write the value out")
         if getattr(event, "tag", None) is not None:
@@ -115,7 +116,7 @@ def _value(node: yaml.Node, place: tuple[Step, ...], marks: Marks, name: str) ->
         return found
     if isinstance(node, yaml.SequenceNode):
         return tuple(_value(item, (*place, index), marks, name) for index, item in enumerate(node.value))
-    return _scalar(node.value, plain=node.style is None)
+    return _scalar(str(node.value), plain=getattr(node, "style", None) is None)
 
 
 def _scalar(text: str, *, plain: bool) -> Any:

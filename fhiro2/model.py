@@ -26,7 +26,6 @@ HOUR = 60 * MINUTE
 DAY = 24 * HOUR
 
 
-
 class Specimen(IntEnum):
     """The kind of blood (or none) a value speaks of. UNKNOWN never becomes anything else later."""
 

@@ -37,7 +37,9 @@ class Windows(_Frozen):
     haemoglobin: float = Field(240.0, gt=0, description="age of an earlier haemoglobin")
     inspired_oxygen: float = Field(60.0, gt=0, description="age of the inspired oxygen in force")
     inspired_oxygen_ventilated: float = Field(240.0, gt=0, description="the same while the ventilator's feed is alive")
-    ventilator_alive: float = Field(60.0, gt=0, description="a ventilator value this recent keeps its settings in force")
+    ventilator_alive: float = Field(
+        60.0, gt=0, description="a ventilator value this recent keeps its settings in force"
+    )
     steady: float = Field(20.0, ge=0, description="inspired oxygen changed more recently is called not steady")
     cardiac_output: float = Field(15.0, gt=0, description="cardiac output before or after the gas")
     temperature: float = Field(60.0, gt=0, description="core temperature before or after the gas")

@@ -10,7 +10,6 @@ from rich.console import Console
 from rich.table import Table
 from rich.text import Text
 
-from fhiro2.account import Account
 from fhiro2.catalogue import DERIVED_BY_CODE, title_of
 from fhiro2.census import Census, advice
 from fhiro2.errors import Bucket
@@ -140,8 +139,6 @@ def show_quarantine(console: Console, lines: Sequence[dict[str, Any]]) -> None:
         part = f" component {line['component']}" if "component" in line else ""
         table.add_row(line["reason"], line["resource"] + part, line["file"], str(line["line"]), line["detail"])
     console.print(table)
-
-
 
 
 def _short(system: str) -> str:

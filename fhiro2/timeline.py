@@ -153,7 +153,11 @@ def _resolve_one(
             contents.setdefault(int(rows["text"][row]), set()).add(same(row))
     torn = {row for row in members if len(contents.get(int(rows["text"][row]), ())) > 1}
     for row in torn:
-        stands[row], bucket[row], reason[row] = False, _BUCKET_NUMBER[Bucket.QUARANTINED], _REASON_NUMBER[Reason.VERSION]
+        stands[row], bucket[row], reason[row] = (
+            False,
+            _BUCKET_NUMBER[Bucket.QUARANTINED],
+            _REASON_NUMBER[Reason.VERSION],
+        )
     whole = [row for row in members if row not in torn]
     if not whole:
         return
@@ -218,9 +222,7 @@ def batches(
         first = last
 
 
-def _timelines(
-    readings: Readings, keys: list[str], names: Names, origins: Origins, roster: Roster
-) -> Timelines:
+def _timelines(readings: Readings, keys: list[str], names: Names, origins: Origins, roster: Roster) -> Timelines:
     identities = np.array([origins.ids[origin] for origin in readings["origin"].tolist()], dtype=np.str_)
     _, tie = np.unique(identities, return_inverse=True)
     readings = readings[np.lexsort((readings["part"], tie, readings["effective"], readings["patient"]))]

@@ -72,7 +72,9 @@ def _units() -> dict[str, Unit]:
         "time": {"min": "1", "s": "0.01666666666666666666666666667", "h": "60", "d": "1440", "a": "525960"},
     }  # fmt: skip
     table = {
-        code: Unit(code, dimension, Decimal(factor)) for dimension, codes in rows.items() for code, factor in codes.items()
+        code: Unit(code, dimension, Decimal(factor))
+        for dimension, codes in rows.items()
+        for code, factor in codes.items()
     }
     table["Cel"] = Unit("Cel", "temperature", Decimal(1))
     table["K"] = Unit("K", "temperature", Decimal(1), Decimal("-273.15"))

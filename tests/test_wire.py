@@ -46,8 +46,10 @@ REFUSED = [
     (b'{"resourceType":"Observation","valueQuantity":{"value":7.4,"value":74}}', Reason.DUPLICATE_KEY),
     (b'{"resourceType":"Observation","valueQuantity":{"value":7.4,"valu\\u0065":74}}', Reason.DUPLICATE_KEY),
     (b'{"resourceType":"Observation","note":[{"text":"a","text":"b"}]}', Reason.DUPLICATE_KEY),
-    (b'{"resourceType":"Observation","status":"final","valueQuantity":{"value":7.4,"value":74},"id" :"x"}',
-     Reason.DUPLICATE_KEY),
+    (
+        b'{"resourceType":"Observation","status":"final","valueQuantity":{"value":7.4,"value":74},"id" :"x"}',
+        Reason.DUPLICATE_KEY,
+    ),
     (b'{"resourceType":"Observation","valueQuantity":{"value":NaN}}', Reason.NUMBER),
     (b'{"resourceType":"Observation","valueQuantity":{"value":Infinity}}', Reason.NUMBER),
     (b'{"resourceType":"Observation","valueQuantity":{"value":1e400}}', Reason.RANGE),

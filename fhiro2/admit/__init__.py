@@ -6,7 +6,7 @@ from __future__ import annotations
 
 import hashlib
 import re
-from functools import lru_cache
+from functools import cache
 from typing import Any, Final, NamedTuple
 
 import msgspec
@@ -16,7 +16,7 @@ from fhiro2.admit.context import Context, Interpreter, SpecimenEntry
 from fhiro2.admit.moment import moment
 from fhiro2.admit.rows import Rows
 from fhiro2.admit.value import Value, Valuer
-from fhiro2.catalogue import MEASURED_BY_NAME, QUANTITY
+from fhiro2.catalogue import QUANTITY
 from fhiro2.codes import Code
 from fhiro2.errors import Bucket, Reason, SkipError
 from fhiro2.fhir.systems import IDENTIFIERS, OBSERVATION_CATEGORY
@@ -100,10 +100,8 @@ class Admitter:
 
     def _admit(self, found: Observation) -> Admission:
         _check_identity(found)
-        if found.component or found.hasMember:
-            code = self._panel_code(found)
-        else:
-            code = self._coder.code(found.code)
+        grouping = bool(found.component or found.hasMember)
+        code = self._panel_code(found) if grouping else self._coder.code(found.code)
         if code is not None and code.use == "panel":
             code = None
         value = self._valuer.value(found, code) if code is not None else None
@@ -371,7 +369,7 @@ def is_own(identifiers: Any) -> bool:
     return False
 
 
-@lru_cache(maxsize=None)
+@cache
 def _blood(code: Specimen, specimen: Specimen, site: Specimen) -> tuple[Specimen, int] | None:
     """The kind of blood that all evidence agrees on, with the evidence; None where it contradicts itself."""
     blood, evidence = code, SpecimenEvidence.NOTHING if code is Specimen.UNKNOWN else SpecimenEvidence.CODE

@@ -22,7 +22,9 @@ _MOST_FRACTION: Final = {"fio2": 1.03, "so2": 1.02, "fo2hb": 1.02}
 _SLACK: Final = 1e-9  # a limit given in another unit may come out a last digit beyond
 _TETRAMER_LIMIT: Final = 3.3  # mmol/L; below it the unit of haemoglobin is in doubt
 _COMPARATORS: Final = frozenset({"<", "<=", ">", ">="})
-_NOT_MEASURED: Final = re.compile(r"clotted|err(or)?|-{2,}|nan|n/?a|not measured|no result|insufficient", re.IGNORECASE)
+_NOT_MEASURED: Final = re.compile(
+    r"clotted|err(or)?|-{2,}|nan|n/?a|not measured|no result|insufficient", re.IGNORECASE
+)
 
 
 class Value(msgspec.Struct, frozen=True, gc=False):

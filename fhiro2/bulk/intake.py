@@ -95,7 +95,7 @@ class _Label(NamedTuple):
 
 
 _COLLECT_EVERY = 200_000
-"""New objects between two garbage collections while reading: rows make no cycles, and looking for them costs a tenth."""
+"""New objects between two garbage collections while reading: rows make no cycles, looking for them costs a tenth."""
 
 Watch = Callable[[Observation, Admission], None]
 
@@ -229,11 +229,11 @@ def _observations(
             if admission.bucket is Bucket.QUARANTINED and quarantine is not None:
                 quarantine.keep(row, source, unit.raw, label.key, admission.reason, admission.detail, unit.content)
             if admission.parts:
-                parts[row] = tuple(error.reason for _, error in admission.parts)
+                parts[row] = tuple(refused.reason for _, refused in admission.parts)
                 if quarantine is not None:
-                    for number, error in admission.parts:
+                    for number, refused in admission.parts:
                         quarantine.keep(
-                            row, source, unit.raw, label.key, error.reason, error.detail, unit.content, number
+                            row, source, unit.raw, label.key, refused.reason, refused.detail, unit.content, number
                         )
     resolution = resolve(book.versions, book.hashes)
     _close(resolution, account, quarantine)
@@ -343,9 +343,7 @@ def _entry(resource: dict[str, Any], interpreter: Interpreter) -> Entry:
 def _own_provenance(resource: dict[str, Any]) -> bool:
     agents = resource.get("agent")
     return isinstance(agents, list) and any(
-        isinstance(agent, dict)
-        and isinstance(agent.get("who"), dict)
-        and is_own([agent["who"].get("identifier")])
+        isinstance(agent, dict) and isinstance(agent.get("who"), dict) and is_own([agent["who"].get("identifier")])
         for agent in agents
     )
 

@@ -8,16 +8,15 @@ from __future__ import annotations
 import numpy as np
 
 from fhiro2.catalogue import DERIVED
-from fhiro2.derive.alveolar import alveolar_pressure, gradient, ratio
+from fhiro2.derive.alveolar import alveolar_pressure, gradient, ratio, water_vapour
 from fhiro2.derive.basis import Basis, Side, basis
-from fhiro2.derive.constants import NORMAL_DPG, NORMAL_TEMPERATURE, RESPIRATORY_QUOTIENT, SOLUBILITY, STANDARD_PH
 from fhiro2.derive.constants import KILOPASCAL_PER_MMHG as KPA
+from fhiro2.derive.constants import NORMAL_DPG, NORMAL_TEMPERATURE, RESPIRATORY_QUOTIENT, SOLUBILITY, STANDARD_PH
 from fhiro2.derive.dissociation import saturation
 from fhiro2.derive.doubt import mark_arterial, mark_fractions
 from fhiro2.derive.operand import Guard, Mark, Operand, derive, exact, fixed, read, within
 from fhiro2.derive.oxygen_content import content
 from fhiro2.derive.transport import body_surface_area, consumption, delivery, extraction_ratio, index
-from fhiro2.derive.alveolar import water_vapour
 from fhiro2.model import AnchorTable, Caution, Column, Floats, Timelines, Truths, Why
 from fhiro2.settings import Settings
 
@@ -50,7 +49,11 @@ def add_derived(tables: dict[str, AnchorTable], timelines: Timelines, settings: 
     output, body = tables["cardiac-output"], tables["body"]
     flow, surface = read(output, "co"), _surface(output, timelines)
     derive(
-        output, "cardiac-index", _cardiac_index, [flow, *surface.operands], [within(flow, 0.5, 20), *surface.guards],
+        output,
+        "cardiac-index",
+        _cardiac_index,
+        [flow, *surface.operands],
+        [within(flow, 0.5, 20), *surface.guards],
         constants=SURFACE_BASIS,
     )
     surface = _surface(body, timelines)
@@ -118,7 +121,11 @@ def _arterial(table: AnchorTable, timelines: Timelines) -> None:
 
     derive(table, "oxygen-delivery", delivered, [flow, *operands], guards, constants=found.number)
     derive(
-        table, "oxygen-delivery-index", indexed, [*surface.operands, flow, *operands], [*guards, *surface.guards],
+        table,
+        "oxygen-delivery-index",
+        indexed,
+        [*surface.operands, flow, *operands],
+        [*guards, *surface.guards],
         constants=found.number,
     )
 
@@ -198,11 +205,18 @@ def _pair(table: AnchorTable, timelines: Timelines) -> None:
     guards = [*guards, within(flow, 0.5, 20), Guard(method, Why.CARDIAC_OUTPUT_METHOD)]
     derive(table, "oxygen-consumption", _consumption, [flow, *operands], guards, marks, found.number)
     derive(
-        table, "oxygen-consumption-index", _consumption_index, [*surface.operands, flow, *operands],
-        [*guards, *surface.guards], marks, found.number,
+        table,
+        "oxygen-consumption-index",
+        _consumption_index,
+        [*surface.operands, flow, *operands],
+        [*guards, *surface.guards],
+        marks,
+        found.number,
     )
     _judge_difference(
-        table, "oxygen-content-difference", "oxygen-extraction-ratio",
+        table,
+        "oxygen-content-difference",
+        "oxygen-extraction-ratio",
         ("oxygen-consumption", "oxygen-consumption-index"),
     )
 
@@ -218,15 +232,13 @@ def _central_pair(table: AnchorTable) -> None:
 
 
 def _judge_difference(table: AnchorTable, difference: str, extraction: str, uptakes: tuple[str, ...]) -> None:
-    """No positive difference: nothing follows. Within twice its doubt: extraction is a bound, uptake not computable."""
+    """No positive difference: nothing follows. Within twice its doubt: extraction is a bound, uptake is withheld."""
     column = table.columns[difference]
     negative = column.known() & ~(column.high > 0)
     doubtful = column.known() & ~negative & (column.value <= 2 * column.uncertainty)
     ratio_column = table.columns[extraction]
     loose = doubtful & ratio_column.known()
-    ratio_column.high[loose] = np.round(
-        ratio_column.value[loose] + _ONE_SIDED_95 * ratio_column.uncertainty[loose], 2
-    )
+    ratio_column.high[loose] = np.round(ratio_column.value[loose] + _ONE_SIDED_95 * ratio_column.uncertainty[loose], 2)
     ratio_column.low[loose], ratio_column.value[loose] = 0.0, np.nan
     for name in (difference, extraction):
         table.columns[name].cautions[doubtful] |= np.uint64(Caution.LOW_DIFFERENCE)
@@ -258,8 +270,16 @@ def _barometer(table: AnchorTable, settings: Settings) -> Operand:
     usual.column.cautions[:] = np.where(known, measured.cautions, np.uint64(Caution.PRESSURE_ASSUMED))
     column = usual.column
     return Operand(
-        Column(column.value, np.where(known, measured.low, assumed), np.where(known, measured.high, assumed),
-               column.uncertainty, column.cautions, column.why, measured.source, measured.runner_up),
+        Column(
+            column.value,
+            np.where(known, measured.low, assumed),
+            np.where(known, measured.high, assumed),
+            column.uncertainty,
+            column.cautions,
+            column.why,
+            measured.source,
+            measured.runner_up,
+        ),
         {"pb": known},
     )
 
@@ -292,7 +312,10 @@ def _pulse(table: AnchorTable) -> None:
     spo2, fio2 = read(table, "spo2"), read(table, "fio2")
     too_high = spo2.column.known() & ~(spo2.column.value <= 0.97)
     derive(
-        table, "sf-ratio", lambda saturation, inspired: ratio(100.0 * saturation, inspired), [spo2, fio2],
+        table,
+        "sf-ratio",
+        lambda saturation, inspired: ratio(100.0 * saturation, inspired),
+        [spo2, fio2],
         [Guard(too_high, Why.SATURATION_TOO_HIGH), within(fio2, 0.205, 1.0)],
     )
 
@@ -319,14 +342,18 @@ def _predicted(table: AnchorTable, timelines: Timelines, settings: Settings) -> 
     def predicted(
         pressure: Floats, ph: Floats, pco2: Floats, cohb: Floats, methb: Floats, dpg: Floats, body: Floats
     ) -> Floats:
-        inactive = [np.clip(one, 0.0, 0.9) for one in (cohb, methb)]
-        return 100.0 * saturation(pressure, ph, pco2, body, dpg, *inactive, np.zeros_like(ph))
+        carboxy, met = np.clip(cohb, 0.0, 0.9), np.clip(methb, 0.0, 0.9)
+        return 100.0 * saturation(pressure, ph, pco2, body, dpg, carboxy, met, np.zeros_like(ph))
 
     born = np.array([np.nan if one.born is None else one.born for one in timelines.patients], dtype=np.float64)
     infant = table.effective - born[table.patient] < _YEAR / 2 if count else np.zeros(0, dtype=bool)
     derive(
-        table, "saturation-predicted", predicted, [pressure, *shifts, dpg, body],
-        [within(pressure, 5, 700), Guard(infant, Why.AGE_EXCLUDES)], constants=CURVE_BASIS,
+        table,
+        "saturation-predicted",
+        predicted,
+        [pressure, *shifts, dpg, body],
+        [within(pressure, 5, 700), Guard(infant, Why.AGE_EXCLUDES)],
+        constants=CURVE_BASIS,
     )
 
 

@@ -54,7 +54,7 @@ def _swapped(table: AnchorTable) -> Truths:
     ph, hco3 = table.columns["pha"], table.columns["hco3a"]
     pao2, paco2 = table.columns["pao2"], table.columns["paco2"]
     known = ph.known() & hco3.known() & pao2.known() & paco2.known()
-    expected = hco3.value / bicarbonate(ph.value, np.float64(1.0))
+    expected = hco3.value / bicarbonate(ph.value, np.ones(len(ph.value)))
     off = np.abs(paco2.value - expected) > 0.25 * expected
     fits = np.abs(pao2.value - expected) < 0.10 * expected
     result: Truths = known & off & fits

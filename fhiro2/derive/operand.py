@@ -75,7 +75,7 @@ def derive(
     marks: Sequence[Mark] = (),
     constants: Integers | int = 0,
 ) -> None:
-    """Add the derived column ``code`` to ``table``: rounded to its declared decimals, or not computable with a reason."""
+    """Add the derived column ``code`` to ``table``: rounded to its declared decimals, or missing with a reason."""
     count = len(table.reading)
     names = tuple(dict.fromkeys(name for operand in operands for name in operand.rests_on))
     missing, used = np.zeros(count, dtype=np.int64), np.zeros(count, dtype=np.int64)
@@ -83,7 +83,9 @@ def derive(
     cautions = np.zeros(count, dtype=np.uint64)
     for operand in operands:
         lacking = ~operand.column.known()
-        why[lacking] = np.where(np.isin(operand.column.why, _PASSED_ON), operand.column.why, Why.INPUT_MISSING)[lacking]
+        why[lacking] = np.where(np.isin(operand.column.why, _PASSED_ON), operand.column.why, Why.INPUT_MISSING)[
+            lacking
+        ]
         cautions |= operand.column.cautions
         for name, rows in operand.rests_on.items():
             bit = np.int64(1) << names.index(name)

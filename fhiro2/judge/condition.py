@@ -79,8 +79,8 @@ Condition: TypeAlias = Comparison | AnyOf | AllOf | Not
 class Finding:
     """What a condition is at every anchor.
 
-    ``truth`` is TRUE, FALSE or UNKNOWN; ``probability``, that the condition truly holds, is NaN where nothing is known.
-    ``missing`` says of each quantity where its value decides that the condition is unknown.
+    ``truth`` is TRUE, FALSE or UNKNOWN; ``probability``, that the condition truly holds, is NaN where it is not known.
+    ``missing`` says of each quantity where the condition is unknown because of it: not known, or a bound too wide.
     """
 
     truth: Truth

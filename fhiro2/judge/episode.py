@@ -1,4 +1,4 @@
-"""Episodes: a rule's findings folded over a patient's anchors, from raised to cleared, each a flag with its evidence."""
+"""Episodes: a rule's findings folded over a patient's anchors, from raised to cleared, each a flag with evidence."""
 
 from __future__ import annotations
 
@@ -47,8 +47,8 @@ def fold(
 ) -> tuple[list[Flag], Carried]:
     """The flags that ``rule`` raises or clears at the anchors of ``table``, and the episodes open after them.
 
-    Raised where the rule's condition is true with enough probability and no episode is open; cleared where its clearing
-    condition is true and it does not raise. What is unknown changes nothing.
+    Raised where the rule's condition is true with enough probability and no episode is open; cleared where its
+    clearing condition is true and it does not raise. What is unknown changes nothing.
     """
     found = evaluate(rule.raises, table.columns)
     evaluated = in_scope(rule, timelines, table)
@@ -134,7 +134,7 @@ def _words(rule: Rule, table: AnchorTable, place: int, name: str) -> str:
         return "not known"
     low, high = float(column.low[place]), float(column.high[place])
     if not low < high:
-        return shown(float(np.round(column.value[place], decimals_of(name)))) + label
+        return shown(float(column.value[place])) + label
     if math.isinf(high):
         return f"at least {shown(low)}{label}"
     return f"at most {shown(high)}{label}" if low <= 0 else f"{shown(low)} to {shown(high)}{label}"

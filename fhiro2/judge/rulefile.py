@@ -169,7 +169,10 @@ class Rule(_Frozen):
     @cached_property
     def units(self) -> dict[str, str]:
         """The unit in which each quantity is shown: that of the first condition on it."""
-        return dict(reversed([*self.raise_when.units(), *self.clear_when.units()]))
+        found: dict[str, str] = {}
+        for quantity, unit in (*self.raise_when.units(), *self.clear_when.units()):
+            found.setdefault(quantity, unit)
+        return found
 
 
 @dataclass(frozen=True)

@@ -12,8 +12,6 @@ from fhiro2.model import (
     Caution,
     Column,
     Integers,
-    Kind,
-    Readings,
     Specimen,
     Timelines,
     Truths,
@@ -154,7 +152,9 @@ class _Pairing:
             near = within(self.keyed, stream, at, _micro(minutes), _micro(minutes))
             table.columns[name] = self._column(table, nearest(self.keyed, near, len(at)), quantity)
         for name, minutes in (("pb", windows.barometer), ("peep", windows.inspired_oxygen)):
-            table.columns[name] = self._column(table, latest(self.keyed, self._stream(name), at, _micro(minutes)), name)
+            table.columns[name] = self._column(
+                table, latest(self.keyed, self._stream(name), at, _micro(minutes)), name
+            )
 
     def _table(self, kind: str, rows: Integers) -> AnchorTable:
         readings = self.readings
@@ -229,7 +229,7 @@ def _taken(column: Column, place: Integers, found: Truths, why: Integers) -> Col
 
 
 def _repeats(table: AnchorTable, window: int) -> Truths:
-    """Anchors that file an earlier one again: same patient, near in time, all shared analytes equal within rounding."""
+    """Anchors that file an earlier one again: same patient, near in time, shared analytes equal within rounding."""
     count = len(table.reading)
     repeated = np.zeros(count, dtype=bool)
     if count < 2:

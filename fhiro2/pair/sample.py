@@ -34,7 +34,9 @@ def leads(keyed: Keys, blood: Specimen, usable: Truths, same_sample: int) -> Sam
     pressure = np.flatnonzero(of_blood & (readings["quantity"] == QUANTITY["po2"]))
     lead = pressure
     for name in ("so2", "fo2hb"):
-        rows = np.flatnonzero(of_blood & (readings["quantity"] == QUANTITY[name]) & (readings["kind"] == Kind.MEASURED))
+        rows = np.flatnonzero(
+            of_blood & (readings["quantity"] == QUANTITY[name]) & (readings["kind"] == Kind.MEASURED)
+        )
         alone = ~_has_partner(keyed, rows, lead, same_sample)
         lead = np.sort(np.concatenate([lead, rows[alone]]))
     owned = np.unique(readings["sample"][lead])

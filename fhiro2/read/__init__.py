@@ -9,7 +9,7 @@ from fhiro2.errors import Reason
 
 
 class Raw(NamedTuple):
-    """One raw resource: its bytes (without the line end), the file's number and its line, and what is wrong with it."""
+    """One raw resource: its bytes without the line end, number of its file, its line, and what is wrong with it."""
 
     content: bytes
     file: int
@@ -23,4 +23,4 @@ class Source(Protocol):
     name: str
 
     def read(self, leave_out: bytes | None = None) -> Iterator[Raw]:
-        """All raw resources but whole lines that begin with ``leave_out``, in any order; the same when called again."""
+        """All raw resources but whole lines beginning with ``leave_out``, in any order; the same when called again."""

@@ -64,9 +64,7 @@ class NdjsonSource:
             except (EOFError, OSError, zlib.error):
                 yield Raw(b"", number, line + 1, Reason.TRUNCATED)
 
-    def _lines(
-        self, number: int, stream: BinaryIO, leave_out: bytes | None, most: int | None = None
-    ) -> Iterator[Raw]:
+    def _lines(self, number: int, stream: BinaryIO, leave_out: bytes | None, most: int | None = None) -> Iterator[Raw]:
         """Lines of one stream; a line over the cap is passed over without holding it."""
         line = total = reported = 0
         while content := stream.readline(MOST_LINE + 1):

@@ -1,0 +1,130 @@
+"""The cases of a rule, run through the evaluator and the episodes that judge real patients."""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from dataclasses import dataclass
+from datetime import UTC, date, datetime
+from pathlib import Path
+
+import numpy as np
+
+from fhiro2.catalogue import DERIVED_BY_CODE
+from fhiro2.judge.condition import UNKNOWN, canonical, evaluate
+from fhiro2.judge.episode import YEAR, fold
+from fhiro2.judge.rulefile import Case, Given, Rule, read_pack
+from fhiro2.model import MICROSECONDS, MINUTE, READING, AnchorTable, Column, Names, Origins, Patient, Timelines, Why
+
+START = int(datetime(2000, 1, 1, tzinfo=UTC).timestamp()) * MICROSECONDS
+"""The time of ``after_minutes: 0``."""
+
+
+@dataclass(frozen=True)
+class Report:
+    """What checking a pack found: a line for each rule, each case that failed, and each warning."""
+
+    hash: str
+    rules: tuple[str, ...]
+    failures: tuple[str, ...]
+    warnings: tuple[str, ...]
+
+    @property
+    def failed(self) -> bool:
+        """Whether a case did not find what it expects."""
+        return bool(self.failures)
+
+    @property
+    def warned(self) -> bool:
+        """Whether a person should look at a rule again."""
+        return bool(self.warnings)
+
+    def lines(self) -> list[str]:
+        """The report as text, failures last."""
+        verdict = f"{len(self.failures)} cases FAILED" if self.failures else "all cases passed"
+        return [*self.rules, *self.warnings, *self.failures, f"pack {self.hash[:12]}: {verdict}"]
+
+
+def check_pack(folder: Path, today: date) -> Report:
+    """Load the rules below ``folder`` and run every case; a rule due for review by ``today`` is a warning.
+
+    Raises StopError where a file cannot be loaded.
+    """
+    pack = read_pack(folder)
+    rules, failures, warnings = [], [], []
+    for rule, file in zip(pack.rules, pack.files, strict=True):
+        wrong = [f"{file}: rule {rule.id}, {text}" for case in rule.cases if (text := failure(rule, case))]
+        failures += wrong
+        passed = len(rule.cases) - len(wrong)
+        rules.append(f"{rule.id}/{rule.version} ({rule.state}): {passed} of {len(rule.cases)} cases passed")
+        if rule.review_by <= today:
+            warnings.append(f"{file}: rule {rule.id} was to be reviewed by {rule.review_by}; {rule.owner} reviews it")
+    return Report(pack.hash, tuple(rules), tuple(failures), tuple(warnings))
+
+
+def failure(rule: Rule, case: Case) -> str:
+    """What is wrong when ``case`` is run: its name, values, what it expects and what was found; '' if nothing."""
+    found, message, missing = _outcome(rule, case)
+    if found == case.expect and message == (case.message or ""):
+        return ""
+    expected = case.expect + (f" {case.message!r}" if case.message else "")
+    got = found + (f" {message!r}" if message else "") + (f" (not known: {', '.join(missing)})" if missing else "")
+    used = "; ".join(
+        f"+{moment.after_minutes} min "
+        + ", ".join(f"{name} {one.value:g} {one.unit} (u {one.uncertainty:g})" for name, one in moment.values.items())
+        for moment in case.given
+    )
+    age = case.given[0].age_years
+    years = "unknown" if age is None else f"{age:g}"
+    return f"case {case.name!r}: expected {expected}, got {got}; values used: age {years}; {used}"
+
+
+def _outcome(rule: Rule, case: Case) -> tuple[str, str, list[str]]:
+    """What the case finds, the message of the flag that stands, and which quantities were missing at the end."""
+    timelines, table = _laid_out(rule, case)
+    flags, opened = fold(rule, timelines, table, {})
+    if opened:
+        return "flag", next(iter(opened.values())).flag.message, []
+    if flags:
+        return "cleared", "", []
+    if case.given[0].age_years is None:
+        return "unknown", "", ["age"]
+    found = evaluate(rule.raises, table.columns)
+    if found.truth[-1] == UNKNOWN:
+        return "unknown", "", [name for name, where in found.missing.items() if where[-1]]
+    return "none", "", []
+
+
+def _laid_out(rule: Rule, case: Case) -> tuple[Timelines, AnchorTable]:
+    """A patient with one anchor for each moment of the case."""
+    effective = START + MINUTE * np.array([moment.after_minutes for moment in case.given], dtype=np.int64)
+    rows = np.arange(len(effective))
+    readings = np.zeros(len(rows), READING)
+    readings["effective"] = readings["known"] = effective
+    readings["origin"], readings["part"] = rows, -1
+    age = case.given[0].age_years
+    born = None if age is None else int(effective[0]) - round(age * YEAR)
+    people = [Patient("case", "case", "Patient/case", born)]
+    origins = Origins([f"moment-{row}" for row in rows], ["1"] * len(rows))
+    timelines = Timelines(readings, people, [()], Names(subjects=["Patient/case"]), origins)
+    columns = {name: _column(name, [moment.values.get(name) for moment in case.given]) for name in rule.units}
+    return timelines, AnchorTable(rule.at, rows, readings["patient"], effective, effective, columns)
+
+
+def _column(name: str, given: Sequence[Given | None]) -> Column:
+    value, uncertainty = np.full((2, len(given)), np.nan)
+    for place, one in enumerate(given):
+        if one is not None:
+            scale = canonical(name, one.unit)
+            value[place] = one.value * scale.factor + scale.offset
+            uncertainty[place] = one.uncertainty * scale.factor
+    known = ~np.isnan(value)
+    return Column(
+        value=value,
+        low=value,
+        high=value,
+        uncertainty=uncertainty,
+        cautions=np.zeros(len(given), np.uint64),
+        why=np.where(known, Why.KNOWN, Why.NEVER_RECORDED).astype(np.int8),
+        source=np.where(known & (name not in DERIVED_BY_CODE), np.arange(len(given)), -1),
+        runner_up=np.full(len(given), -1),
+    )

@@ -1,0 +1,225 @@
+"""Conditions: three-valued logic against SQL's, probabilities against another library, bounds and limits."""
+
+from __future__ import annotations
+
+import sqlite3
+
+import numpy as np
+import pytest
+from hypothesis import given
+from hypothesis import strategies as st
+from scipy import stats
+
+from fhiro2.judge.condition import (
+    FALSE,
+    TRUE,
+    UNKNOWN,
+    AllOf,
+    AnyOf,
+    Comparison,
+    Condition,
+    Not,
+    Operator,
+    comparison,
+    evaluate,
+    quantities,
+)
+from fhiro2.model import Column, Why
+from fhiro2.normal import probability_below
+
+NAMES = ("pao2", "sao2", "hb")
+NAN = float("nan")
+
+
+def column(value: object, uncertainty: object = 1.0, low: object = None, high: object = None) -> Column:
+    """A column that is known where it has a value or a bound."""
+    values = np.atleast_1d(np.array(value, dtype=np.float64))
+    lows = values if low is None else np.atleast_1d(np.array(low, dtype=np.float64))
+    highs = values if high is None else np.atleast_1d(np.array(high, dtype=np.float64))
+    known = ~np.isnan(values) | (lows < highs)
+    size = len(values)
+    return Column(
+        values,
+        lows,
+        highs,
+        np.broadcast_to(np.array(uncertainty, dtype=np.float64), size).copy(),
+        np.zeros(size, np.uint64),
+        np.where(known, Why.KNOWN, Why.NEVER_RECORDED).astype(np.int8),
+        np.full(size, -1),
+        np.full(size, -1),
+    )
+
+
+def truth_of(condition: Condition, **columns: Column) -> list[int]:
+    return evaluate(condition, columns).truth.tolist()
+
+
+# --- three-valued logic ------------------------------------------------------------------------------------------
+# The tables of Kleene 1952, section 64, are those of SQL's AND, OR and NOT with NULL: SQLite is the other computer.
+
+LEAF = st.sampled_from([Comparison(name, Operator.BELOW, 1.0) for name in NAMES])
+TREE = st.recursive(
+    LEAF,
+    lambda part: st.one_of(
+        st.lists(part, min_size=1, max_size=3).map(lambda parts: AnyOf(tuple(parts))),
+        st.lists(part, min_size=1, max_size=3).map(lambda parts: AllOf(tuple(parts))),
+        part.map(Not),
+    ),
+    max_leaves=8,
+)
+STATE = {TRUE: 0.0, FALSE: 2.0, UNKNOWN: NAN}
+SQL = {TRUE: 1, FALSE: 0, UNKNOWN: None}
+
+
+def as_sql(condition: Condition) -> str:
+    match condition:
+        case Comparison():
+            return condition.quantity
+        case Not():
+            return f"(NOT {as_sql(condition.part)})"
+        case AnyOf():
+            return "(" + " OR ".join(as_sql(part) for part in condition.parts) + ")"
+        case AllOf():
+            return "(" + " AND ".join(as_sql(part) for part in condition.parts) + ")"
+
+
+@given(TREE)
+def test_groups_agree_with_sql(condition: Condition) -> None:
+    states = [(a, b, c) for a in STATE for b in STATE for c in STATE]
+    columns = {name: column([STATE[row[place]] for row in states], 0.1) for place, name in enumerate(NAMES)}
+    with sqlite3.connect(":memory:") as base:
+        base.execute("CREATE TABLE anchor (pao2, sao2, hb)")
+        base.executemany("INSERT INTO anchor VALUES (?, ?, ?)", [[SQL[one] for one in row] for row in states])
+        rows = base.execute(f"SELECT {as_sql(condition)} FROM anchor ORDER BY rowid").fetchall()  # noqa: S608
+    base.close()
+    expected = [UNKNOWN if row[0] is None else row[0] for row in rows]
+    assert evaluate(condition, columns).truth.tolist() == expected
+
+
+@given(TREE, st.lists(st.sampled_from([TRUE, FALSE, UNKNOWN]), min_size=3, max_size=3))
+def test_what_is_missing_is_what_made_it_unknown(condition: Condition, states: list[int]) -> None:
+    """By definition: only an unknown finding misses something, and only what is not known."""
+    columns = {name: column([STATE[state]]) for name, state in zip(NAMES, states, strict=True)}
+    found = evaluate(condition, columns)
+    missing = {name for name, where in found.missing.items() if where[0]}
+    assert (found.truth[0] == UNKNOWN) == bool(missing)
+    assert missing <= {name for name, state in zip(NAMES, states, strict=True) if state == UNKNOWN}
+    assert set(found.missing) == set(quantities(condition))
+
+
+@given(TREE, st.lists(st.floats(-5, 5), min_size=3, max_size=3))
+def test_a_true_finding_holds_more_likely_than_not(condition: Condition, values: list[float]) -> None:
+    """By definition of a symmetric doubt: a comparison and its probability lie on the same side of one half."""
+    found = evaluate(condition, {name: column([value]) for name, value in zip(NAMES, values, strict=True)})
+    assert (found.probability[0] - 0.5) * (found.truth[0] - 0.5) >= 0
+
+
+def test_missing_is_reported_only_for_what_decides() -> None:
+    both = AllOf((Comparison("hb", Operator.BELOW, 7.0), Comparison("oxygen-extraction-ratio", Operator.ABOVE, 0.4)))
+    found = evaluate(both, {"hb": column([6.5, 12.0]), "oxygen-extraction-ratio": column([NAN, NAN])})
+    assert found.truth.tolist() == [UNKNOWN, FALSE]
+    assert {name: where.tolist() for name, where in found.missing.items()} == {
+        "hb": [False, False],
+        "oxygen-extraction-ratio": [True, False],
+    }
+
+
+# --- limits ------------------------------------------------------------------------------------------------------
+
+
+@pytest.mark.parametrize(
+    ("how", "expected"),
+    [
+        (Operator.BELOW, [TRUE, FALSE, FALSE]),
+        (Operator.AT_MOST, [TRUE, TRUE, FALSE]),
+        (Operator.AT_LEAST, [FALSE, TRUE, TRUE]),
+        (Operator.ABOVE, [FALSE, FALSE, TRUE]),
+    ],
+)
+def test_operators_at_a_limit_in_another_unit(how: Operator, expected: list[int]) -> None:
+    """7.9, 8 and 8.1 kPa in mm[Hg] (0.133322 kPa, UCUM) against a limit of 8 kPa: equal is equal in both units."""
+    values = column([7.9 / 0.133322, 8 / 0.133322, 8.1 / 0.133322])
+    assert truth_of(comparison("pao2", how, 8, "kPa"), pao2=values) == expected
+
+
+def test_a_limit_of_8_kpa_is_one_of_60_mmhg() -> None:
+    """60 mm[Hg] is 7.99932 kPa (UCUM): with the declared decimal both are 60.0."""
+    assert truth_of(comparison("pao2", Operator.BELOW, 8, "kPa"), pao2=column([60.0, 59.9])) == [FALSE, TRUE]
+    assert comparison("pao2", Operator.BELOW, 8, "kPa") == comparison("pao2", Operator.BELOW, 60, "mm[Hg]")
+
+
+def test_values_are_compared_as_they_are_shown() -> None:
+    """Declared decimals: 59.96 mm[Hg] is written 60.0, thus not below 60."""
+    assert truth_of(comparison("pao2", Operator.BELOW, 60, "mm[Hg]"), pao2=column([59.96, 59.94])) == [FALSE, TRUE]
+
+
+def test_haemoglobin_by_amount() -> None:
+    """0.6206 mmol/L of monomer per g/dL (Jordan & Kratz): 4.3 mmol/L is 6.93 g/dL, with one decimal 6.9."""
+    assert comparison("hb", Operator.BELOW, 4.3, "mmol/L").limit == 6.9
+
+
+# --- bounds ------------------------------------------------------------------------------------------------------
+
+
+@pytest.mark.parametrize(
+    ("low", "high", "below", "at_least"),
+    [
+        (0, 40, TRUE, FALSE),
+        (60, np.inf, FALSE, TRUE),
+        (0, 60, UNKNOWN, UNKNOWN),
+        (50, 70, UNKNOWN, UNKNOWN),
+        (61, 70, FALSE, TRUE),
+        (-np.inf, 59.9, TRUE, FALSE),
+    ],
+)
+def test_a_bound_decides_only_as_a_whole(low: float, high: float, below: int, at_least: int) -> None:
+    """By definition, against a limit of 60: the limit inside the interval, or on its edge, is unknown."""
+    bound = column([NAN], NAN, [low], [high])
+    assert truth_of(Comparison("pao2", Operator.BELOW, 60.0), pao2=bound) == [below]
+    assert truth_of(Comparison("pao2", Operator.AT_LEAST, 60.0), pao2=bound) == [at_least]
+    probability = evaluate(Comparison("pao2", Operator.BELOW, 60.0), {"pao2": bound}).probability[0]
+    assert probability == below if below != UNKNOWN else np.isnan(probability)
+
+
+def test_a_value_said_to_be_known_without_number_is_unknown() -> None:
+    hollow = column([NAN])
+    hollow.why[:] = Why.KNOWN
+    assert truth_of(Comparison("pao2", Operator.BELOW, 60.0), pao2=hollow) == [UNKNOWN]
+
+
+# --- probability -------------------------------------------------------------------------------------------------
+
+
+@given(st.floats(-50, 50), st.floats(0.01, 50), st.floats(-50, 50))
+def test_normal_distribution_agrees_with_scipy(value: float, uncertainty: float, limit: float) -> None:
+    """Published error of the approximation: 1.5e-7 in erf (Abramowitz & Stegun 7.1.26), half of it here."""
+    ours = probability_below(np.array([value]), np.array([uncertainty]), limit)[0]
+    assert ours == pytest.approx(stats.norm.cdf(limit, value, uncertainty), abs=7.6e-8)
+
+
+def test_normal_distribution_without_doubt() -> None:
+    """By definition of a certain value."""
+    assert probability_below(np.array([1.0, 2.0, 3.0]), np.zeros(3), 2.0).tolist() == [1.0, 0.5, 0.0]
+
+
+def test_probability_that_the_limit_is_crossed() -> None:
+    """Standard normal table: 0.9772 two standard uncertainties below a limit, 0.8413 one above."""
+    low = evaluate(Comparison("hb", Operator.BELOW, 7.0), {"hb": column([6.8], 0.1)})
+    high = evaluate(Comparison("hb", Operator.ABOVE, 7.0), {"hb": column([7.1], 0.1)})
+    assert low.probability[0] == pytest.approx(0.9772, abs=5e-5)
+    assert high.probability[0] == pytest.approx(0.8413, abs=5e-5)
+
+
+def test_probability_of_groups() -> None:
+    """Bounds of Frechet: all, at most its least likely part; any, at least its likeliest known one."""
+    parts = (Comparison("hb", Operator.BELOW, 7.0), Comparison("sao2", Operator.BELOW, 0.9))
+    columns = {"hb": column([6.8, 6.8], 0.1), "sao2": column([0.88, NAN], 0.02)}
+    least, most = evaluate(AllOf(parts), columns).probability, evaluate(AnyOf(parts), columns).probability
+    assert least[0] == pytest.approx(0.8413, abs=5e-5)
+    assert most.tolist() == pytest.approx([0.9772, 0.9772], abs=5e-5)
+    assert evaluate(Not(parts[0]), columns).probability[0] == pytest.approx(0.0228, abs=5e-5)
+
+
+def test_a_value_of_unknown_doubt_is_not_called_certain() -> None:
+    found = evaluate(Comparison("hb", Operator.BELOW, 7.0), {"hb": column([6.0], NAN)})
+    assert (found.truth[0], found.probability[0]) == (TRUE, 0.5)
