@@ -77,8 +77,9 @@ def replay(
     from fhiro2.replay import replay as run
     from fhiro2.terminal import show_account, show_derived
 
+    given = _settings(settings), _mapping(mapping), _pack(rules)
     with _reading(inputs) as sources:
-        account = run(sources, out, _settings(settings), _mapping(mapping), _pack(rules)).as_json()
+        account = run(sources, out, *given).as_json()
     if as_json:
         _print_json(account)
     else:
@@ -100,8 +101,9 @@ def census(
     from fhiro2.census import census as run
     from fhiro2.terminal import show_census
 
+    given = _settings(settings), _mapping(mapping), _pack(rules)
     with _reading(inputs) as sources:
-        found = run(sources, _settings(settings), _mapping(mapping), _pack(rules))
+        found = run(sources, *given)
     show_census(Console(), found)
 
 

@@ -3,10 +3,13 @@
 from __future__ import annotations
 
 import csv
+import re
 from collections.abc import Mapping
-from dataclasses import dataclass
+from dataclasses import dataclass, fields
+from enum import IntEnum
 from functools import cache
 from importlib.resources import files
+from math import inf
 from types import MappingProxyType
 
 from fhiro2.errors import StopError
@@ -62,6 +65,9 @@ class Code:
     source: str
 
 
+COLUMNS = tuple(field.name for field in fields(Code))
+
+
 @cache
 def code_table() -> Mapping[tuple[str, str], Code]:
     """All codes by (system, code); raises StopError naming file and line for a bad row."""
@@ -71,43 +77,51 @@ def code_table() -> Mapping[tuple[str, str], Code]:
 def read_table(text: str, name: str) -> Mapping[tuple[str, str], Code]:
     """The table in ``text``, checked row by row; ``name`` is used in messages. Raises StopError."""
     lines = [(number, line) for number, line in enumerate(text.splitlines(), 1) if line and not line.startswith("#")]
+    if not lines or lines[0][1] != ",".join(COLUMNS):
+        raise StopError(f"{name}:{lines[0][0] if lines else 1}: the first row must be {','.join(COLUMNS)}")
     found: dict[tuple[str, str], Code] = {}
-    reader = csv.DictReader([line for _, line in lines])
-    for (number, _), row in zip(lines[1:], reader, strict=True):
+    for number, line in lines[1:]:
         try:
-            code = _code(row)
+            code = _code(_row(line))
             for key in ((LOINC, code.loinc), *((MDC, one) for one in code.mdc)):
                 if key in found:
                     raise ValueError(f"{key[1]} is given twice; remove one row")
                 found[key] = code
-        except (ValueError, KeyError, TypeError, AttributeError) as error:
+        except (ValueError, csv.Error) as error:
             raise StopError(f"{name}:{number}: {error}") from None
     return MappingProxyType(found)
 
 
 def check_digit(loinc: str) -> bool:
     """Whether the last digit of a LOINC code is its mod-10 check digit (LOINC users' guide)."""
-    number, _, digit = loinc.partition("-")
-    if not (number.isdigit() and len(digit) == 1 and digit.isdigit()):
+    if not re.fullmatch("[0-9]+-[0-9]", loinc):
         return False
+    number, digit = loinc.split("-")
     doubled = "".join(str(int(one) * 2) if place % 2 == 0 else one for place, one in enumerate(reversed(number)))
     return (10 - sum(map(int, doubled)) % 10) % 10 == int(digit)
 
 
+def _row(line: str) -> dict[str, str]:
+    [cells] = csv.reader([line], strict=True)
+    if len(cells) != len(COLUMNS):
+        raise ValueError(f"{len(cells)} columns where {len(COLUMNS)} are due; quote texts with commas")
+    return dict(zip(COLUMNS, cells, strict=True))
+
+
 def _code(row: dict[str, str]) -> Code:
-    if None in row or None in row.values():
-        raise ValueError("a row has too many or too few columns; quote commas")
     use = row["use"]
     if use not in USES:
         raise ValueError(f"use {use!r} is none of {', '.join(USES)}")
     if not check_digit(row["loinc"]):
         raise ValueError(f"{row['loinc']} has a wrong check digit; correct the code")
     units = tuple(one for one in row["units"].split(";") if one)
-    for unit in (*units, *([row["unit_if_absent"]] if row["unit_if_absent"] else [])):
+    for unit in units:
         if unit not in UNITS:
             raise ValueError(f"unit {unit!r} is not in the table of units")
+    if row["unit_if_absent"] not in ("", *units):
+        raise ValueError(f"unit_if_absent {row['unit_if_absent']!r} is none of the row's units")
     low, high = float(row["low"] or "nan"), float(row["high"] or "nan")
-    if use == "value" and not low < high:
+    if use == "value" and not -inf < low < high < inf:
         raise ValueError(f"limits {row['low']!r} to {row['high']!r} are no range")
     if use == "value" and not row["quantity"]:
         raise ValueError("a code that is read needs its quantity")
@@ -119,8 +133,8 @@ def _code(row: dict[str, str]) -> Code:
         row["status"],
         use,
         row["quantity"],
-        Specimen[row["specimen"].upper()],
-        Kind[row["kind"].upper()],
+        Specimen[_member(row["specimen"], Specimen)],
+        Kind[_member(row["kind"], Kind)],
         _flag(row["corrected"]),
         _flag(row["negate"]),
         units,
@@ -133,6 +147,12 @@ def _code(row: dict[str, str]) -> Code:
         row["confidence"],
         row["source"],
     )
+
+
+def _member(text: str, names: type[IntEnum]) -> str:
+    if text.upper() not in names.__members__:
+        raise ValueError(f"{text!r} is none of {', '.join(names.__members__).lower()}")
+    return text.upper()
 
 
 def _flag(text: str) -> bool:

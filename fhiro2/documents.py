@@ -9,6 +9,7 @@ from __future__ import annotations
 
 import re
 from collections.abc import Iterator
+from math import isfinite
 from pathlib import Path
 from typing import Any, TypeVar
 
@@ -57,10 +58,13 @@ def parse(content: bytes, name: str) -> tuple[Any, Marks]:
     _check_bytes(content, name)
     try:
         node = yaml.compose(content.decode("utf-8"), Loader=yaml.SafeLoader)
-    except (yaml.YAMLError, UnicodeDecodeError, RecursionError) as error:
-        mark = getattr(error, "problem_mark", None)
+    except yaml.reader.ReaderError as error:
+        line, column = _place(content.decode("utf-8")[: error.position])
+        raise StopError(f"{name}:{line}:{column}: a control character; remove it") from None
+    except yaml.MarkedYAMLError as error:
+        mark = error.problem_mark
         line, column = (mark.line + 1, mark.column + 1) if mark else (1, 1)
-        text = getattr(error, "problem", None) or "not readable as YAML text"
+        text = ", ".join(filter(None, (error.context, error.problem)))
         raise StopError(f"{name}:{line}:{column}: {text}") from None
     if node is None:
         raise StopError(f"{name}:1:1: the document is empty")
@@ -79,12 +83,18 @@ def _check_bytes(content: bytes, name: str) -> None:
                 raise StopError(f"{name}:{number}:{line.index(sign) + 1}: {word}")
     try:
         text = content.decode("utf-8")
-    except UnicodeDecodeError:
-        raise StopError(f"{name}:1:1: not UTF-8; save it as plain UTF-8") from None
+    except UnicodeDecodeError as error:
+        line, column = _place(content[: error.start].decode("utf-8"))
+        raise StopError(f"{name}:{line}:{column}: not UTF-8; save it as plain UTF-8") from None
     try:
         _check_events(text, name)
     except yaml.YAMLError:
         return  # compose meets the same mistake and says it with its place
+
+
+def _place(before: str) -> tuple[int, int]:
+    """Line and column of the sign that follows the text ``before``."""
+    return before.count("\n") + 1, len(before) - before.rfind("\n")
 
 
 def _check_events(text: str, name: str) -> None:
@@ -128,7 +138,7 @@ def _scalar(text: str, *, plain: bool) -> Any:
         return None
     if _WHOLE.fullmatch(text) and len(text) <= 18:
         return int(text)
-    if _DECIMAL.fullmatch(text):
+    if _DECIMAL.fullmatch(text) and isfinite(float(text)):
         return float(text)
     return text
 

@@ -8,7 +8,6 @@ import numpy as np
 import pytest
 from hypothesis import given
 from hypothesis import strategies as st
-from scipy import stats
 
 from fhiro2.judge.condition import (
     FALSE,
@@ -25,7 +24,6 @@ from fhiro2.judge.condition import (
     quantities,
 )
 from fhiro2.model import Column, Why
-from fhiro2.normal import probability_below
 
 NAMES = ("pao2", "sao2", "hb")
 NAN = float("nan")
@@ -188,18 +186,6 @@ def test_a_value_said_to_be_known_without_number_is_unknown() -> None:
 
 
 # --- probability -------------------------------------------------------------------------------------------------
-
-
-@given(st.floats(-50, 50), st.floats(0.01, 50), st.floats(-50, 50))
-def test_normal_distribution_agrees_with_scipy(value: float, uncertainty: float, limit: float) -> None:
-    """Published error of the approximation: 1.5e-7 in erf (Abramowitz & Stegun 7.1.26), half of it here."""
-    ours = probability_below(np.array([value]), np.array([uncertainty]), limit)[0]
-    assert ours == pytest.approx(stats.norm.cdf(limit, value, uncertainty), abs=7.6e-8)
-
-
-def test_normal_distribution_without_doubt() -> None:
-    """By definition of a certain value."""
-    assert probability_below(np.array([1.0, 2.0, 3.0]), np.zeros(3), 2.0).tolist() == [1.0, 0.5, 0.0]
 
 
 def test_probability_that_the_limit_is_crossed() -> None:

@@ -10,6 +10,7 @@ from pathlib import Path
 import numpy as np
 import pytest
 
+from fhiro2 import normal
 from fhiro2.derive import alveolar, dissociation, oxygen_content, transport, uncertainty
 from fhiro2.derive.constants import (
     BINDING_OXYHAEMOGLOBIN,
@@ -140,7 +141,7 @@ FORMULAS = {
     "sf_ratio": lambda given: alveolar.ratio(given["spo2_percent"], given["fio2"]),
     "ph2o_buck": lambda given: alveolar.water_vapour(given["temp_C"]),
     "pb_west_altitude": lambda given: alveolar.pressure_at_altitude(given["h_km"]),
-    "normal_probability": lambda given: uncertainty.probability_below(0.0, 1.0, given["z"]),
+    "normal_probability": lambda given: normal.probability_below(0.0, 1.0, given["z"]),
     "gum_u_cao2": content_uncertainty,
     "gum_u_o2er_shared_hb": extraction_uncertainty,
     "gum_u_aa_full": gradient_uncertainty,
@@ -203,7 +204,7 @@ def parsed(module):
 
 COEFFICIENTS = [
     pytest.param(module, number, id=f"{module.__name__}:{node.lineno}:{node.value}")
-    for module in (dissociation, oxygen_content, alveolar, transport, uncertainty)
+    for module in (dissociation, oxygen_content, alveolar, transport, normal)
     for number, node in enumerate(parsed(module)[1])
 ]
 

@@ -327,7 +327,7 @@ class Admitter:
 
     def _body_site(self, found: Observation, specimen: SpecimenEntry | None) -> Specimen:
         if found.bodySite is not None:
-            stated = self._interpreter.kind([(row.system, row.code) for row in found.bodySite.coding])
+            stated = self._interpreter.kind(found.bodySite)
             if stated is not Specimen.UNKNOWN:
                 return stated
         return specimen.site if specimen else Specimen.UNKNOWN

@@ -2,12 +2,14 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterable, Iterator
 from dataclasses import dataclass, field
-from typing import Any
+from typing import Any, TypeVar
+
+import msgspec
 
 from fhiro2.admit.moment import moment
 from fhiro2.errors import Reason, SkipError
+from fhiro2.fhir.wire import Concept, Period, Reference
 from fhiro2.model import Fact, Specimen
 from fhiro2.settings import Mapping
 
@@ -59,6 +61,69 @@ class FactEntry:
 Entry = PatientEntry | SpecimenEntry | tuple[FactEntry, ...] | None
 
 
+class _Identifier(msgspec.Struct, frozen=True):
+    system: str = ""
+    value: str = ""
+
+
+class _Link(msgspec.Struct, frozen=True):
+    other: Reference = Reference()
+    type: str = ""
+
+
+class _Patient(msgspec.Struct, frozen=True):
+    id: str
+    birthDate: str | None = None  # noqa: N815
+    identifier: tuple[_Identifier, ...] = ()
+    link: tuple[_Link, ...] = ()
+
+
+class _Collection(msgspec.Struct, frozen=True):
+    bodySite: Concept = Concept()  # noqa: N815
+
+
+class _Specimen(msgspec.Struct, frozen=True):
+    status: str = ""
+    type: Concept = Concept()
+    accessionIdentifier: _Identifier = _Identifier()  # noqa: N815
+    collection: _Collection = _Collection()
+    subject: Reference = Reference()
+
+
+class _Thing(msgspec.Struct, frozen=True):
+    """An Encounter or Device: its type may state a fact."""
+
+    type: Concept | tuple[Concept, ...] = ()
+    patient: Reference = Reference()
+
+
+class _Event(msgspec.Struct, frozen=True):
+    """A Condition, Procedure or MedicationAdministration."""
+
+    resourceType: str  # noqa: N815
+    status: str = ""
+    code: Concept = Concept()
+    medicationCodeableConcept: Concept = Concept()  # noqa: N815
+    verificationStatus: Concept = Concept()  # noqa: N815
+    subject: Reference = Reference()
+    onsetDateTime: str | None = None  # noqa: N815
+    abatementDateTime: str | None = None  # noqa: N815
+    performedDateTime: str | None = None  # noqa: N815
+    performedPeriod: Period = Period()  # noqa: N815
+    effectiveDateTime: str | None = None  # noqa: N815
+    effectivePeriod: Period = Period()  # noqa: N815
+
+
+Read = TypeVar("Read")
+
+
+def _read(resource: dict[str, Any], form: type[Read]) -> Read:
+    try:
+        return msgspec.convert(resource, form)
+    except msgspec.ValidationError as error:
+        raise SkipError(Reason.TYPE, f"does not have the form of R4: {error}") from None
+
+
 class Interpreter:
     """Reads context resources by a site's mapping."""
 
@@ -72,107 +137,84 @@ class Interpreter:
         """What ``resource`` states; raises SkipError where it states nothing that is used."""
         kind = resource.get("resourceType")
         if kind == "Patient":
-            return self._patient(resource)
+            return self._patient(_read(resource, _Patient))
         if kind == "Specimen":
             return self.specimen(resource)
-        if kind in ("Encounter", "Device") and not self._stated(resource, "type"):
-            return None
-        if kind == "Device":
-            subject = _reference(resource.get("patient"))
-            return self._stated_facts(resource, "type", subject, True, FIRST_MOMENT, LAST_MOMENT)
-        return self._event(resource)
+        if kind in ("Encounter", "Device"):
+            thing = _read(resource, _Thing)
+            types = thing.type if isinstance(thing.type, tuple) else (thing.type,)
+            stated = self._stated(*types)
+            return _facts(stated, thing.patient, True, FIRST_MOMENT, LAST_MOMENT) if stated else None
+        return self._event(_read(resource, _Event))
 
     def specimen(self, resource: dict[str, Any]) -> SpecimenEntry:
-        """The blood that a Specimen speaks of; raises SkipError where its own statements contradict each other."""
-        if resource.get("status") == "entered-in-error":
+        """The blood that a Specimen speaks of; raises SkipError where it is withdrawn or has not the form of one."""
+        found = _read(resource, _Specimen)
+        if found.status == "entered-in-error":
             raise SkipError(Reason.RETRACTED, "specimen entered in error")
-        collection = resource.get("collection")
-        accession = resource.get("accessionIdentifier")
-        text = ""
-        if isinstance(accession, dict) and isinstance(accession.get("value"), str):
-            text = f"{accession.get('system', '')}|{accession['value']}"
+        accession = found.accessionIdentifier
         return SpecimenEntry(
-            self.kind(_codings(resource.get("type"))),
-            self.kind(_codings(collection.get("bodySite"))) if isinstance(collection, dict) else Specimen.UNKNOWN,
-            text,
-            _reference(resource.get("subject")),
+            self.kind(found.type),
+            self.kind(found.collection.bodySite),
+            f"{accession.system}|{accession.value}" if accession.value else "",
+            found.subject.reference or "",
         )
 
-    def kind(self, codings: Iterable[tuple[Any, Any]]) -> Specimen:
-        """The kind of blood that codings of a specimen type or body site state, else UNKNOWN."""
-        for system, code in codings:
+    def kind(self, concept: Concept) -> Specimen:
+        """The kind of blood that a specimen type or body site states, else UNKNOWN."""
+        for coding in concept.coding:
+            system, code = coding.system or "", coding.code or ""
             if (system, code) in self._specimens:
                 return self._specimens[system, code]
             if system in _SPECIMEN_SYSTEMS and code in _SPECIMEN_CODES:
                 return _SPECIMEN_CODES[code]
         return Specimen.UNKNOWN
 
-    def _patient(self, resource: dict[str, Any]) -> PatientEntry:
-        identifiers = tuple(
-            (str(row.get("system", "")), str(row.get("value", "")))
-            for row in resource.get("identifier") or ()
-            if isinstance(row, dict)
-        )
-        links = [row for row in resource.get("link") or () if isinstance(row, dict)]
-        named = {str(resource.get("id")), *(value for _, value in identifiers)}
-        if named & self._excluded:
+    def _patient(self, found: _Patient) -> PatientEntry:
+        identifiers = tuple((row.system, row.value) for row in found.identifier)
+        if {found.id, *(value for _, value in identifiers)} & self._excluded:
             raise SkipError(Reason.EXCLUDED_PATIENT, "on the list of excluded patients")
         return PatientEntry(
-            _birth(resource.get("birthDate")),
+            _birth(found.birthDate),
             identifiers,
-            tuple(_reference(row.get("other")) for row in links if row.get("type") == "replaced-by"),
-            tuple(_reference(row.get("other")) for row in links if row.get("type") == "replaces"),
+            tuple(row.other.reference or "" for row in found.link if row.type == "replaced-by"),
+            tuple(row.other.reference or "" for row in found.link if row.type == "replaces"),
         )
 
-    def _event(self, resource: dict[str, Any]) -> Entry:
-        kind = resource.get("resourceType")
-        concept = "medicationCodeableConcept" if kind == "MedicationAdministration" else "code"
-        if not self._stated(resource, concept):
+    def _event(self, found: _Event) -> Entry:
+        kind = found.resourceType
+        stated = self._stated(found.medicationCodeableConcept if kind == "MedicationAdministration" else found.code)
+        if not stated:
             raise SkipError(Reason.UNMAPPED_CODE, f"{kind} of no mapped code")
+        verification = {coding.code for coding in found.verificationStatus.coding}
+        if found.status == "entered-in-error" or "entered-in-error" in verification:
+            raise SkipError(Reason.RETRACTED, f"{kind} entered in error")
         if kind == "Condition":
-            verification = {code for _, code in _codings(resource.get("verificationStatus"))}
-            if "entered-in-error" in verification:
-                raise SkipError(Reason.RETRACTED, "condition entered in error")
             answer = "refuted" not in verification
-            start = self._moment(resource.get("onsetDateTime")) if answer else None
-            end = self._moment(resource.get("abatementDateTime"))
+            times = (found.onsetDateTime if answer else None, found.abatementDateTime)
         else:
-            status = resource.get("status")
-            if status == "entered-in-error":
-                raise SkipError(Reason.RETRACTED, f"{kind} entered in error")
-            if status not in _DONE:
+            if found.status not in _DONE:
                 raise SkipError(Reason.STATUS, f"{kind} of a status that states no fact")
-            answer = _DONE[status]
-            start, end = self._performed(resource, "effective" if kind == "MedicationAdministration" else "performed")
-        return self._stated_facts(
-            resource,
-            concept,
-            _reference(resource.get("subject")),
+            answer = _DONE[found.status]
+            once = found.performedDateTime or found.effectiveDateTime
+            period = found.performedPeriod if kind == "Procedure" else found.effectivePeriod
+            times = (once, once) if once else (period.start, period.end)
+        start, end = (None if text is None else moment(text, self._zone)[0] for text in times)
+        return _facts(
+            stated,
+            found.subject,
             answer,
             FIRST_MOMENT if start is None else start,
             LAST_MOMENT if end is None else end,
         )
 
-    def _performed(self, resource: dict[str, Any], name: str) -> tuple[int | None, int | None]:
-        once = self._moment(resource.get(f"{name}DateTime"))
-        if once is not None:
-            return once, once
-        period = resource.get(f"{name}Period")
-        if isinstance(period, dict):
-            return self._moment(period.get("start")), self._moment(period.get("end"))
-        return None, None
+    def _stated(self, *concepts: Concept) -> list[str]:
+        pairs = {(coding.system or "", coding.code or "") for concept in concepts for coding in concept.coding}
+        return sorted({self._facts[pair] for pair in pairs if pair in self._facts})
 
-    def _moment(self, text: Any) -> int | None:
-        return moment(text, self._zone)[0] if isinstance(text, str) else None
 
-    def _stated(self, resource: dict[str, Any], name: str) -> bool:
-        return any(pair in self._facts for pair in _codings(resource.get(name)))
-
-    def _stated_facts(
-        self, resource: dict[str, Any], name: str, subject: str, answer: bool, start: int, end: int
-    ) -> tuple[FactEntry, ...]:
-        stated = sorted({self._facts[pair] for pair in _codings(resource.get(name)) if pair in self._facts})
-        return tuple(FactEntry(subject, Fact(fact, answer, start, end)) for fact in stated)
+def _facts(stated: list[str], subject: Reference, answer: bool, start: int, end: int) -> tuple[FactEntry, ...]:
+    return tuple(FactEntry(subject.reference or "", Fact(fact, answer, start, end)) for fact in stated)
 
 
 @dataclass
@@ -226,20 +268,6 @@ def _followed(patient: str, replaced: dict[str, set[str]]) -> str:
             return patient
         seen.append(target)
     return seen[-1]
-
-
-def _codings(concept: Any) -> Iterator[tuple[Any, Any]]:
-    if isinstance(concept, list):
-        for one in concept:
-            yield from _codings(one)
-    elif isinstance(concept, dict):
-        for row in concept.get("coding") or ():
-            if isinstance(row, dict):
-                yield row.get("system"), row.get("code")
-
-
-def _reference(node: Any) -> str:
-    return node["reference"] if isinstance(node, dict) and isinstance(node.get("reference"), str) else ""
 
 
 def _birth(text: Any) -> int | None:

@@ -12,9 +12,9 @@ from functools import cached_property
 from itertools import pairwise
 from pathlib import Path
 from string import Formatter
-from typing import Annotated, Any, Literal, Self
+from typing import Annotated, Any, Literal, Self, TypeVar
 
-from pydantic import BaseModel, BeforeValidator, ConfigDict, Field, StringConstraints, model_validator
+from pydantic import AfterValidator, BaseModel, BeforeValidator, ConfigDict, Field, StringConstraints, model_validator
 
 from fhiro2.catalogue import DERIVED_BY_CODE, INPUT_BY_NAME
 from fhiro2.documents import Marks, parse, validated
@@ -23,12 +23,22 @@ from fhiro2.judge.condition import AllOf, AnyOf, Condition, Not, Operator, canon
 
 TIME = "time"
 Place = tuple[str | int, ...]
-Text = Annotated[str, StringConstraints(min_length=1)]
-Number = Annotated[float, Field(allow_inf_nan=False)]
+Item = TypeVar("Item")
+
+
+def _filled(items: tuple[Item, ...]) -> tuple[Item, ...]:
+    if not items:
+        raise ValueError("an empty list; write at least one")
+    return items
 
 
 def _date(text: Any) -> Any:
     return date.fromisoformat(text) if isinstance(text, str) else text
+
+
+Some = Annotated[tuple[Item, ...], AfterValidator(_filled)]
+Text = Annotated[str, StringConstraints(min_length=1)]
+Number = Annotated[float, Field(allow_inf_nan=False)]
 
 
 class _Frozen(BaseModel):
@@ -38,8 +48,8 @@ class _Frozen(BaseModel):
 class Clause(_Frozen):
     """A node of a condition as written: a group (any, all, not) or a comparison of one quantity."""
 
-    any_of: tuple[Clause, ...] | None = Field(None, alias="any", min_length=1)
-    all_of: tuple[Clause, ...] | None = Field(None, alias="all", min_length=1)
+    any_of: Some[Clause] | None = Field(None, alias="any")
+    all_of: Some[Clause] | None = Field(None, alias="all")
     negated: Clause | None = Field(None, alias="not")
     quantity: str | None = None
     below: Number | None = None
@@ -130,7 +140,7 @@ class Case(_Frozen):
     """What a rule must find at the last of some moments; ``message`` is its exact text where a flag is expected."""
 
     name: Text
-    given: tuple[Moment, ...] = Field(min_length=1)
+    given: Some[Moment]
     expect: Literal["flag", "none", "unknown", "cleared"]
     message: Text | None = None
 
@@ -152,9 +162,9 @@ class Rule(_Frozen):
     raise_when: Clause = Field(alias="raise")
     clear_when: Clause = Field(alias="clear")
     message: Text
-    cautions: tuple[Text, ...] = Field(min_length=1)
-    sources: tuple[Source, ...] = Field(min_length=1)
-    cases: tuple[Case, ...] = Field(min_length=1)
+    cautions: Some[Text]
+    sources: Some[Source]
+    cases: Some[Case]
 
     @property
     def raises(self) -> Condition:

@@ -111,7 +111,7 @@ def within(keyed: Keys, stream: Integers, anchors: Integers, before: int, after:
 
 
 def nearest(keyed: Keys, candidates: Candidates, count: int, rank: Integers | None = None) -> Choice:
-    """For each of ``count`` anchors the best candidate: lowest ``rank`` of its row, nearest, earlier, first in order."""
+    """For each of ``count`` anchors the best candidate: lowest ``rank`` of its row, nearest, earlier."""
     choice = Choice.none(count)
     if not len(candidates.row):
         return choice
