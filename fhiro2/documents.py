@@ -59,8 +59,8 @@ def parse(content: bytes, name: str) -> tuple[Any, Marks]:
     try:
         node = yaml.compose(content.decode("utf-8"), Loader=yaml.SafeLoader)
     except yaml.reader.ReaderError as error:
-        line, column = _place(content.decode("utf-8")[: error.position])
-        raise StopError(f"{name}:{line}:{column}: a control character; remove it") from None
+        place = _place(content.decode("utf-8")[: error.position])
+        raise StopError(f"{name}:{place}: a control character; remove it") from None
     except yaml.MarkedYAMLError as error:
         mark = error.problem_mark
         line, column = (mark.line + 1, mark.column + 1) if mark else (1, 1)
@@ -84,17 +84,18 @@ def _check_bytes(content: bytes, name: str) -> None:
     try:
         text = content.decode("utf-8")
     except UnicodeDecodeError as error:
-        line, column = _place(content[: error.start].decode("utf-8"))
-        raise StopError(f"{name}:{line}:{column}: not UTF-8; save it as plain UTF-8") from None
+        place = _place(content[: error.start].decode("utf-8"))
+        raise StopError(f"{name}:{place}: not UTF-8; save it as plain UTF-8") from None
     try:
         _check_events(text, name)
     except yaml.YAMLError:
         return  # compose meets the same mistake and says it with its place
 
 
-def _place(before: str) -> tuple[int, int]:
-    """Line and column of the sign that follows the text ``before``."""
-    return before.count("\n") + 1, len(before) - before.rfind("\n")
+def _place(before: str) -> str:
+    """``line:column`` of the sign that follows the text ``before``."""
+    lines = before.split("\n")
+    return f"{len(lines)}:{len(lines[-1]) + 1}"
 
 
 def _check_events(text: str, name: str) -> None:

@@ -64,7 +64,7 @@ FAULTS: dict[str, tuple[str, str, str, str]] = {
     "octal-looking limit": ("below: 8,", "below: 010,", "010", "valid number"),
     "minutes-looking limit": ("below: 8,", "below: 12:30,", "12:30", "valid number"),
     "boolean for a limit": ("below: 8,", "below: true,", "true", "valid number"),
-    "infinite limit": ("below: 8,", "below: 1e999,", "1e999", "finite"),
+    "infinite limit": ("below: 8,", "below: 1e999,", "1e999", "valid number"),
     "no limit": ("below: 8, ", "", "{quantity: pao2, unit", "comparison needs"),
     "two limits": ("below: 8,", "below: 8, above: 9,", "{quantity: pao2, below", "comparison needs"),
     "empty limit": ("below: 8,", "below: ,", "{quantity: pao2, below", "without a value"),
