@@ -47,7 +47,7 @@ def replay(
     try:
         with NdjsonSink(out, run) as sink:
             intake = take_in(sources, settings, mapping, quarantine)
-            account, names, origins = intake.account, intake.rows.names(), intake.rows.origins
+            account, names, origins = intake.account, intake.rows.names, intake.rows.origins
             for timelines in batches(intake.readings, names, origins, intake.roster):
                 outcome, _ = assess(timelines, settings, pack)
                 tally(account, outcome)

@@ -10,12 +10,23 @@ from rich.console import Console
 from rich.table import Table
 from rich.text import Text
 
-from fhiro2.catalogue import DERIVED_BY_CODE, title_of
-from fhiro2.census import Census, advice
+from fhiro2.catalogue import DERIVED_BY_CODE, MEASURED_BY_NAME, title_of
+from fhiro2.census import Census, CodeSeen, Prospect, advice, notices
 from fhiro2.errors import Bucket
-from fhiro2.model import MICROSECONDS, Flag
+from fhiro2.model import MICROSECONDS, WHY_TEXT, Flag, Why
 
 STROKES = {"info": "|", "warning": "||", "critical": "|||"}
+MOST_CODES = 40
+ANCHOR_WORDS = {
+    "arterial": "arterial gases",
+    "mixed-venous": "mixed venous gases",
+    "central-venous": "central venous gases",
+    "pulse-oximetry": "SpO2 readings",
+    "cardiac-output": "cardiac outputs",
+    "body": "body weights",
+}
+_VERDICTS = ("go", "part", "no-go")
+_BLOOD_WORDS = {"unknown": "not stated", "none": ""}
 _MEANING = {
     Bucket.USED: "gave a reading, a stated absence or context",
     Bucket.REPEATED: "the same version again, or superseded",
@@ -96,40 +107,77 @@ def show_flags(console: Console, flags: Sequence[Flag]) -> None:
 
 
 def show_census(console: Console, found: Census) -> None:
-    """What a feed holds, what it allows, and what would unlock most."""
-    account = found.account.as_json()
-    show_account(console, account)
-    console.print("\n[bold]Codes seen[/bold]")
-    table = plain_table("count", "code", "words of the feed", "units", "what became of them", numbers=(0,))
-    for (system, code), seen in sorted(found.codes.items(), key=lambda row: (-row[1].count, row[0]))[:40]:
-        units = ", ".join(f"{unit} {number}" for unit, number in seen.units.most_common(3))
-        ends = ", ".join(f"{number} {end}" for end, number in seen.ends.most_common(3))
-        table.add_row(str(seen.count), f"{_short(system)} {code}", seen.words[:48], units, ends)
-    console.print(table)
+    """What a feed allows, what would unlock most, what it holds, and where it went; most important first."""
+    show_possible(console, found)
+    _show_sentences(console, "What would unlock most", advice(found) or ["Nothing: no value lacks an input."])
+    _show_sentences(console, "What else to know of this feed", notices(found) or ["Nothing was refused."])
+    _show_codes(console, "Codes that are read", {key: seen for key, seen in found.codes.items() if seen.mapped()})
+    _show_codes(
+        console, "Codes seen but not mapped", {key: seen for key, seen in found.codes.items() if not seen.mapped()}
+    )
     console.print("\n[bold]Readings admitted, and minutes until known[/bold]")
     table = plain_table("readings", "quantity", "blood", "median min", "90 % min", numbers=(0, 3, 4))
     for (quantity, blood), number in sorted(found.quantities.items()):
         middle, late = found.lags[quantity]
-        table.add_row(str(number), quantity, blood.replace("_", " "), f"{middle:g}", f"{late:g}")
+        title = MEASURED_BY_NAME[quantity].title
+        table.add_row(str(number), title, _BLOOD_WORDS.get(blood, blood.replace("_", " ")), f"{middle:g}", f"{late:g}")
     console.print(table)
-    show_possible(console, found)
+    show_account(console, found.account.as_json())
 
 
 def show_possible(console: Console, found: Census) -> None:
-    """Go or no-go for each derived value, and the advice."""
-    console.print(f"\n[bold]What this feed allows[/bold] ({found.anchors} anchors)")
-    table = plain_table("", "value", "computed", "not", "", numbers=(2, 3))
-    reasons = found.account.as_json()["not_computable_by_code"]
-    for code, done, refused in found.possible():
-        ranked = sorted(reasons.get(code, {}).items(), key=lambda item: (-item[1], item[0]))
-        words = f"mostly {ranked[0][0]}" if ranked else ""
-        verdict = "go" if done and done >= refused else "part" if done else "no-go"
-        table.add_row(verdict, DERIVED_BY_CODE[code].title, str(done), str(refused), words)
+    """Go or no-go for each derived value, with what the others lack."""
+    console.print(f"\n[bold]What this feed allows[/bold] ({found.patients} patients with readings)")
+    table = plain_table("", "value", "computed", "at", "", "what is lacking", numbers=(2, 3))
+    for prospect in sorted(found.prospects.values(), key=lambda one: _VERDICTS.index(one.verdict())):
+        kind = ANCHOR_WORDS.get(prospect.table, "anchors")
+        table.add_row(
+            prospect.verdict(),
+            DERIVED_BY_CODE[prospect.code].title,
+            str(prospect.computed),
+            str(prospect.anchors),
+            kind,
+            _lacking(prospect) if prospect.anchors else f"no {kind} in this feed",
+        )
     console.print(table)
-    sentences = advice(found)
-    console.print("\n[bold]What would unlock most[/bold]")
-    for sentence in sentences or ["Nothing: every anchor gave every value."]:
-        console.print(f"  {sentence}", highlight=False)
+    console.print("go: computed at half of them or more; part: at fewer; no-go: nowhere", style="dim", highlight=False)
+
+
+def _lacking(prospect: Prospect) -> str:
+    """What the values that were not computed lack, the commonest first, with how often unless it is always."""
+
+    def counted(words: str, number: int) -> str:
+        return words if number == prospect.anchors else f"{words} ({number} of {prospect.anchors})"
+
+    by_reason: dict[Why, list[str]] = {}
+    for (name, why), number in sorted(prospect.lacking.items(), key=lambda row: (-row[1], row[0])):
+        by_reason.setdefault(why, []).append(counted(title_of(name), number))
+    parts = [f"{WHY_TEXT[why]}: {', '.join(names)}" for why, names in by_reason.items()]
+    others = sorted(prospect.other.items(), key=lambda row: (-row[1], row[0]))
+    return "; ".join([*parts, *(counted(WHY_TEXT[why], number) for why, number in others)])
+
+
+def _show_sentences(console: Console, title: str, sentences: Sequence[str]) -> None:
+    console.print(f"\n[bold]{title}[/bold]")
+    table = plain_table("", "")
+    for number, sentence in enumerate(sentences, 1):
+        table.add_row(f"{number}.", sentence)
+    console.print(table)
+
+
+def _show_codes(console: Console, title: str, codes: dict[tuple[str, str], CodeSeen]) -> None:
+    if not codes:
+        return
+    console.print(f"\n[bold]{title}[/bold]")
+    table = plain_table("count", "code", "words of the feed", "units", "what became of them", "example", numbers=(0,))
+    for (system, code), seen in sorted(codes.items(), key=lambda row: (-row[1].count, row[0]))[:MOST_CODES]:
+        units = ", ".join(f"{unit} {number}" for unit, number in seen.units.most_common(3))
+        ends = ", ".join(f"{number} {end}" for end, number in seen.ends.most_common(3))
+        words = f"{seen.words[:48]} (deprecated)" if seen.status == "deprecated" else seen.words[:48]
+        table.add_row(str(seen.count), f"{_short(system)} {code}", words, units, ends, seen.example)
+    console.print(table)
+    if len(codes) > MOST_CODES:
+        console.print(f"and {len(codes) - MOST_CODES} more: --json lists all", style="dim", highlight=False)
 
 
 def show_quarantine(console: Console, lines: Sequence[dict[str, Any]]) -> None:

@@ -79,7 +79,7 @@ class Versions:
 
     def rows(self) -> NDArray[np.void]:
         """All rows as one structured array."""
-        return np.frombuffer(bytes(self._packed), dtype=_VERSION).copy()
+        return np.frombuffer(bytes(self._packed), dtype=_VERSION)
 
 
 def _version_numbers(version: str, place: int) -> tuple[int, int]:
@@ -102,6 +102,10 @@ class Resolution:
         reason = int(self.reason[row])
         return _BUCKETS[int(self.bucket[row])], None if reason < 0 else _REASONS[reason]
 
+    def lose(self, row: int, bucket: Bucket, reason: Reason) -> None:
+        """Take a version out of what stands."""
+        self.stands[row], self.bucket[row], self.reason[row] = False, _BUCKET_NUMBER[bucket], _REASON_NUMBER[reason]
+
     def counts(self) -> Iterator[tuple[Bucket, Reason | None, int]]:
         """How many versions ended in each bucket for each reason."""
         pairs, numbers = np.unique(np.stack([self.bucket, self.reason]), axis=1, return_counts=True)
@@ -114,60 +118,68 @@ def resolve(versions: Versions, content: Callable[[list[int]], Mapping[int, byte
 
     The winner is the greatest ``lastUpdated``, then the greatest versionId if both are integers, then the greatest
     SHA-256 of the content. One version with two contents is quarantined whole. ``content`` gives the SHA-256 of the
-    canonical content of rows, and is asked only for rows that nothing else can tell apart.
+    canonical content of rows; it is asked once, for the rows that nothing else can tell apart.
     """
     rows = versions.rows()
-    bucket, reason = rows["bucket"].copy(), rows["reason"].copy()
-    stands = np.ones(len(rows), dtype=bool)
+    resolution = Resolution(np.ones(len(rows), dtype=bool), rows["bucket"].copy(), rows["reason"].copy(), rows["origin"])
+    groups = _groups(rows)
+    alike = sorted({row for group in groups for row in _alike(rows, group)})
+    hashes = content(alike) if alike else {}
+    for group in groups:
+        _resolve_one(rows, group, resolution, hashes)
+    return resolution
+
+
+def _groups(rows: NDArray[np.void]) -> list[list[int]]:
+    """The rows of each resource that was received more than once, in order of lastUpdated and version number."""
     keyed = np.flatnonzero(rows["key"] != _NO_KEY)
-    order = keyed[np.lexsort((keyed, rows["number"][keyed], rows["updated"][keyed], rows["key"][keyed]))]
+    order = keyed[np.lexsort((rows["number"][keyed], rows["updated"][keyed], rows["key"][keyed]))]
     key = rows["key"][order]
-    starts = np.flatnonzero(np.r_[True, key[1:] != key[:-1]]) if len(order) else np.zeros(0, dtype=np.int64)
-    lengths = np.diff(np.r_[starts, len(order)])
-    for start, length in zip(starts[lengths > 1].tolist(), lengths[lengths > 1].tolist(), strict=True):
-        _resolve_one(rows, order[start : start + length], stands, bucket, reason, content)
-    return Resolution(stands, bucket, reason, rows["origin"])
+    starts = np.flatnonzero(np.diff(key, prepend=-1))
+    lengths = np.diff(starts, append=len(order))
+    return [
+        order[start : start + length].tolist()
+        for start, length in zip(starts[lengths > 1].tolist(), lengths[lengths > 1].tolist(), strict=True)
+    ]
+
+
+def _alike(rows: NDArray[np.void], group: list[int]) -> list[int]:
+    """The rows of a group whose content must be compared: one version twice, or one rank twice, not the same bytes."""
+    found = []
+    for labels in (
+        [int(rows["text"][row]) if rows["text"][row] >= 0 else -2 - row for row in group],
+        [(int(rows["updated"][row]), int(rows["number"][row])) for row in group],
+    ):
+        sharing: dict[object, list[int]] = {}
+        for label, row in zip(labels, group, strict=True):
+            sharing.setdefault(label, []).append(row)
+        for members in sharing.values():
+            if len({int(rows["digest"][row]) for row in members}) > 1:
+                found += members
+    return found
 
 
 def _resolve_one(
-    rows: NDArray[np.void],
-    group: Integers,
-    stands: Truths,
-    bucket: NDArray[np.int8],
-    reason: NDArray[np.int8],
-    content: Callable[[list[int]], Mapping[int, bytes]],
+    rows: NDArray[np.void], group: list[int], resolution: Resolution, hashes: Mapping[int, bytes]
 ) -> None:
-    members = group.tolist()
-    differing = len({int(rows["digest"][row]) for row in members}) > 1
-    hashes: Mapping[int, bytes] = content(members) if differing else {}
+    def content(row: int) -> bytes:
+        return hashes.get(row) or int(rows["digest"][row]).to_bytes(8, "big", signed=True)
 
-    def rank(row: int) -> tuple[int, int, bytes]:
-        return int(rows["updated"][row]), int(rows["number"][row]), hashes.get(row, b"")
-
-    def same(row: int) -> bytes | int:
-        return hashes[row] if differing else int(rows["digest"][row])
-
-    contents: dict[int, set[bytes | int]] = {}
-    for row in members:
+    contents: dict[int, set[bytes]] = {}
+    for row in group:
         if rows["text"][row] >= 0:
-            contents.setdefault(int(rows["text"][row]), set()).add(same(row))
-    torn = {row for row in members if len(contents.get(int(rows["text"][row]), ())) > 1}
+            contents.setdefault(int(rows["text"][row]), set()).add(content(row))
+    torn = {row for row in group if len(contents.get(int(rows["text"][row]), ())) > 1}
     for row in torn:
-        stands[row], bucket[row], reason[row] = (
-            False,
-            _BUCKET_NUMBER[Bucket.QUARANTINED],
-            _REASON_NUMBER[Reason.VERSION],
-        )
-    whole = [row for row in members if row not in torn]
+        resolution.lose(row, Bucket.QUARANTINED, Reason.VERSION)
+    whole = [row for row in group if row not in torn]
     if not whole:
         return
-    winner = max(whole, key=rank)
+    winner = max(whole, key=lambda row: (int(rows["updated"][row]), int(rows["number"][row]), content(row)))
     for row in whole:
-        if row == winner:
-            continue
-        repeated = same(row) == same(winner) and rows["text"][row] == rows["text"][winner]
-        stands[row], bucket[row] = False, _BUCKET_NUMBER[Bucket.REPEATED]
-        reason[row] = _REASON_NUMBER[Reason.SAME_VERSION if repeated else Reason.SUPERSEDED]
+        if row != winner:
+            again = content(row) == content(winner) and rows["text"][row] == rows["text"][winner]
+            resolution.lose(row, Bucket.REPEATED, Reason.SAME_VERSION if again else Reason.SUPERSEDED)
 
 
 def panel_samples(readings: Readings, names: Names, origins: Origins, panels: Mapping[str, str]) -> None:

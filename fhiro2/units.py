@@ -52,7 +52,7 @@ def _units() -> dict[str, Unit]:
         "fraction": {"1": "1", "%": "0.01", "{ratio}": "1", "%{vol}": "0.01"},
         "acidity": {"[pH]": "1"},
         "score": {"{score}": "1"},
-        "mass concentration": {"g/L": "1", "g/dL": "10", "mg/dL": "0.01", "mg/L": "0.001"},
+        "mass concentration": {"g/L": "1", "g/dL": "10", "mg/dL": "0.01", "mg/L": "0.001", "g%": "10"},
         "substance concentration": {
             "mmol/L": "1", "mol/L": "1000", "umol/L": "0.001", "nmol/L": "0.000001", "meq/L": "1",
         },

@@ -215,7 +215,7 @@ def test_carbon_monoxide_is_taken_off_once(tmp_path: Path) -> None:
 @cache
 def ward_timelines() -> tuple[Timelines, ...]:
     intake = take_in([NdjsonSource("ward-nine", [WARD])], Settings(), mapping())
-    return tuple(batches(intake.readings, intake.rows.names(), intake.rows.origins, intake.roster))
+    return tuple(batches(intake.readings, intake.rows.names, intake.rows.origins, intake.roster))
 
 
 def rendered(tmp_path: Path, found: list[Outcome]) -> list[bytes]:
@@ -258,7 +258,7 @@ def test_any_cut_by_patient_equals_the_whole(tmp_path: Path, most_readings: int)
     parts = [
         assess(timelines, Settings(), pack())[0]
         for timelines in batches(
-            intake.readings, intake.rows.names(), intake.rows.origins, intake.roster, most_readings
+            intake.readings, intake.rows.names, intake.rows.origins, intake.roster, most_readings
         )
     ]
     assert len(parts) > 1

@@ -14,7 +14,7 @@ import msgspec
 from fhiro2.admit.coding import SATURATION_OR_PULSE, Coder
 from fhiro2.admit.context import Context, Interpreter, SpecimenEntry
 from fhiro2.admit.moment import moment
-from fhiro2.admit.rows import Rows
+from fhiro2.admit.rows import Interner, Rows, pack_row
 from fhiro2.admit.value import Value, Valuer
 from fhiro2.catalogue import QUANTITY
 from fhiro2.codes import Code
@@ -90,6 +90,11 @@ class Admitter:
         self._zone = zone
         self._base_urls = base_urls
         self._subjects: dict[str, int | SkipError] = {}
+        names = rows.names
+        self._patients = Interner(names.subjects, f"{source}|")
+        self._encounters = Interner(names.encounters, "")
+        self._devices = Interner(names.devices, f"{source}|")
+        self._samples = Interner(names.samples, f"{source}|")
 
     def admit(self, found: Observation) -> Admission:
         """Add the readings of ``found``, or say why it gives none."""
@@ -114,7 +119,7 @@ class Admitter:
         used = False
         if code is not None and (value is not None or not found.component):
             # no value and no stated reason is an absence as well: the measurement was asked for and gave nothing
-            self._add(setting, code, value or Value(), -1, None)
+            self._add(setting, code, value or Value(), -1)
             used = True
         if found.hasMember:
             self._note_panel(found)
@@ -153,7 +158,7 @@ class Admitter:
                 refused.append((number, SkipError(Reason.CONFLICT, "one quantity twice with different values")))
                 continue
             try:
-                self._add(setting, code, value, number, part)
+                self._add(setting, code, value, number)
                 used = True
             except SkipError as error:
                 refused.append((number, error))
@@ -181,19 +186,17 @@ class Admitter:
                 if coding.system == OBSERVATION_CATEGORY:
                     laboratory |= coding.code == "laboratory"
                     vital_sign |= coding.code == "vital-signs"
-        rows, source = self._rows, self._source
         device = "" if found.device is None else found.device.reference or ""
-        sample = self._sample(found, specimen)
         version = meta.versionId if meta is not None and meta.versionId else ""
         return _Setting(
             subject,
             effective,
             known,
             cautions,
-            rows.encounters.number(_plain(found.encounter, "Encounter/")),
-            rows.devices.number(f"{source}|{device}") if device else -1,
-            rows.samples.number(f"{source}|{sample}") if sample else -1,
-            rows.origin(found.id or "", version, "" if version else _content_hash(found)),
+            self._encounters.number(_plain(found.encounter, "Encounter/")),
+            self._devices.number(device),
+            self._samples.number(self._sample(found, specimen)),
+            self._rows.origin(found.id or "", version, "" if version else _content_hash(found)),
             specimen.kind if specimen else Specimen.UNKNOWN,
             self._body_site(found, specimen),
             laboratory,
@@ -209,7 +212,7 @@ class Admitter:
             return f"specimen {found.id if contained else ''}{found.specimen.reference}"
         return f"panel {found.id}" if found.component or found.hasMember else ""
 
-    def _add(self, setting: _Setting, code: Code, value: Value, part: int, component: Component | None) -> None:
+    def _add(self, setting: _Setting, code: Code, value: Value, part: int) -> None:
         quantity, kind, cautions = code.quantity, code.kind, setting.cautions | value.cautions
         if code.loinc == SATURATION_OR_PULSE and quantity == "so2":
             if not setting.laboratory:
@@ -227,7 +230,7 @@ class Admitter:
                 cautions |= int(Caution.MIXED_VENOUS_UNPROVEN)
         if code.method:
             cautions |= _METHOD_CAUTION.get(code.method, 0)
-        self._rows.add(
+        self._rows.packed += pack_row(
             -1,
             setting.subject,
             setting.effective,
@@ -271,7 +274,7 @@ class Admitter:
     def _number(self, patient: str) -> int:
         if patient in self._context.excluded:
             raise SkipError(Reason.EXCLUDED_PATIENT, "on the list of excluded patients")
-        return self._rows.subjects.number(f"{self._source}|{patient}")
+        return self._patients.number(patient)
 
     def _patient(self, text: str) -> str:
         kind, _, identity = self._local(text).partition("/")

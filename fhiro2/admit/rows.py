@@ -3,33 +3,34 @@
 from __future__ import annotations
 
 import struct
-from collections.abc import Hashable
 from dataclasses import dataclass, field
-from typing import Any
 
 import numpy as np
 
 from fhiro2.model import READING, Names, Origins, Readings
 
 _CODES = {"i1": "b", "u1": "B", "i2": "h", "i4": "i", "i8": "q", "u8": "Q", "f8": "d", "b1": "?"}
-_ROW = struct.Struct("<" + "".join(_CODES[READING[name].str[1:]] for name in READING.names or ()))
+pack_row = struct.Struct("<" + "".join(_CODES[READING[name].str[1:]] for name in READING.names or ())).pack
+"""One reading as bytes; arguments in the order of READING."""
 
 
-@dataclass
 class Interner:
-    """Numbers for strings, in order of first sight; -1 for the empty string."""
+    """Numbers for strings, in order of first sight; -1 for the empty string.
 
-    names: list[str] = field(default_factory=list)
-    _numbers: dict[str, int] = field(default_factory=dict)
+    ``names`` gains each new string behind ``prefix``, and may be shared with interners of other prefixes.
+    """
+
+    def __init__(self, names: list[str], prefix: str) -> None:
+        self._names = names
+        self._prefix = prefix
+        self._numbers: dict[str, int] = {"": -1}
 
     def number(self, name: str) -> int:
         """The number of ``name``."""
-        if not name:
-            return -1
         found = self._numbers.get(name)
         if found is None:
-            found = self._numbers[name] = len(self.names)
-            self.names.append(name)
+            found = self._numbers[name] = len(self._names)
+            self._names.append(self._prefix + name)
         return found
 
 
@@ -38,16 +39,9 @@ class Rows:
     """All readings admitted so far, over any number of sources."""
 
     origins: Origins = field(default_factory=Origins)
-    subjects: Interner = field(default_factory=Interner)
-    encounters: Interner = field(default_factory=Interner)
-    devices: Interner = field(default_factory=Interner)
-    samples: Interner = field(default_factory=Interner)
+    names: Names = field(default_factory=Names)
     panels: dict[str, str] = field(default_factory=dict)
-    _packed: bytearray = field(default_factory=bytearray)
-
-    def add(self, *values: Hashable) -> None:
-        """Add one reading; ``values`` in the order of READING."""
-        self._packed += _ROW.pack(*values)
+    packed: bytearray = field(default_factory=bytearray)
 
     def origin(self, resource: str, version: str, content_hash: str) -> int:
         """A new origin: one resource version that gives readings."""
@@ -59,10 +53,7 @@ class Rows:
         return number
 
     def readings(self) -> Readings:
-        """All rows as one structured array (a copy, free to change)."""
-        found: np.ndarray[Any, np.dtype[np.void]] = np.frombuffer(bytes(self._packed), dtype=READING).copy()
+        """All rows as one structured array, free to change; they are handed over and no longer kept here."""
+        packed, self.packed = self.packed, bytearray()
+        found: Readings = np.frombuffer(packed, dtype=READING)
         return found
-
-    def names(self) -> Names:
-        """The strings behind the numbers."""
-        return Names(self.subjects.names, self.encounters.names, self.devices.names, self.samples.names)

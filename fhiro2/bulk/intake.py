@@ -150,7 +150,7 @@ def _take_in(
     account.check(received)
     readings = rows.readings()
     readings = readings[np.isin(readings["origin"], np.array(stands, dtype=np.int64))]
-    panel_samples(readings, rows.names(), rows.origins, rows.panels)
+    panel_samples(readings, rows.names, rows.origins, rows.panels)
     return Intake(rows, readings, Roster(root, born, facts), account, doors)
 
 
