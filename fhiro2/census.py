@@ -3,8 +3,8 @@
 from __future__ import annotations
 
 from collections import Counter
-from collections.abc import Collection, Iterator, Sequence
-from dataclasses import dataclass, field
+from collections.abc import Iterator, Sequence
+from dataclasses import asdict, dataclass, field
 from typing import Any
 
 import numpy as np
@@ -39,9 +39,15 @@ BRINGS: dict[str, tuple[str, ...]] = {
     "spo2": ("59408-5",),
     "pvo2": ("19211-2",),
     "svo2": ("19224-5",),
+    "pcvo2": ("2705-2",),
     "scvo2": ("97549-0",),
 }
-"""LOINC codes that commonly bring an input; where an input has none, its blood must be stated by the Specimen."""
+"""LOINC codes that commonly bring an input; 2705-2 is plain venous, so its Specimen must say central venous."""
+_BLOOD = (
+    dict.fromkeys(("pao2", "paco2", "sao2"), "arterial")
+    | dict.fromkeys(("pvo2", "svo2"), "mixed_venous")
+    | dict.fromkeys(("pcvo2", "scvo2"), "central_venous")
+)
 
 
 @dataclass
@@ -108,32 +114,27 @@ class Census:
     prospects: dict[str, Prospect]
     steps: list[Step]
 
-    def readings(self, quantity: str) -> int:
-        """How many readings of a quantity were admitted, of any blood."""
-        return sum(number for (name, _), number in self.quantities.items() if name == quantity)
+    def readings(self, quantity: str, blood: str | None = None) -> int:
+        """How many readings of a quantity were admitted, of one kind of blood or of any."""
+        return sum(
+            number for (name, of), number in self.quantities.items() if name == quantity and blood in (None, of)
+        )
+
+    def ranked(self) -> list[tuple[tuple[str, str], CodeSeen]]:
+        """The codes seen as ((system, code), what was seen), the most frequent first."""
+        return sorted(self.codes.items(), key=lambda row: (-row[1].count, row[0]))
 
     def as_json(self) -> dict[str, Any]:
-        """The census for machines, most important first."""
+        """The census for machines, most important first; ``lag_minutes`` is (median, 90th percentile)."""
         return {
             "advice": advice(self),
             "notices": notices(self),
             "values": [_prospect_json(prospect) for prospect in self.prospects.values()],
-            "unlocks": [
-                {"inputs": list(step.inputs), "values": step.number, "codes": list(step.codes)} for step in self.steps
-            ],
+            "unlocks": [asdict(step) for step in self.steps],
             "patients": self.patients,
-            "codes": [
-                _code_json(system, code, seen)
-                for (system, code), seen in sorted(self.codes.items(), key=lambda row: (-row[1].count, row[0]))
-            ],
+            "codes": [_code_json(*pair, seen) for pair, seen in self.ranked()],
             "readings": [
-                {
-                    "quantity": quantity,
-                    "blood": blood,
-                    "readings": number,
-                    "median_minutes_until_known": self.lags[quantity][0],
-                    "ninetieth_percentile_minutes_until_known": self.lags[quantity][1],
-                }
+                {"quantity": quantity, "blood": blood, "readings": number, "lag_minutes": self.lags[quantity]}
                 for (quantity, blood), number in sorted(self.quantities.items())
             ],
             "account": self.account.as_json(),
@@ -162,7 +163,7 @@ def advice(found: Census) -> list[str]:
     sentences = []
     for place, step in enumerate(found.steps):
         names = " and ".join(title_of(name) for name in step.inputs)
-        begin = f"{names[0].upper()}{names[1:]}" if place == 0 else f"Then {names}"
+        begin = _capital(names) if place == 0 else f"Then {names}"
         together = " together" if len(step.inputs) > 1 else ""
         values = "; ".join(DERIVED_BY_CODE[code].title for code in step.codes)
         hints = " ".join(_hint(found, name) for name in step.inputs)
@@ -172,11 +173,10 @@ def advice(found: Census) -> list[str]:
 
 def notices(found: Census) -> list[str]:
     """What else a reader of the feed must know, in sentences: refused and deprecated codes, lags that say nothing."""
-    ranked = sorted(found.codes.items(), key=lambda row: (-row[1].count, row[0]))
-    sentences = [_refusal(code, seen) for (_, code), seen in ranked if seen.refused]
+    sentences = [_refusal(code, seen) for (_, code), seen in found.ranked() if seen.refused]
     sentences += [
         f"{code} ({seen.words}) is a deprecated code, seen {seen.count} times: ask the sender for its successor."
-        for (_, code), seen in ranked
+        for (_, code), seen in found.ranked()
         if seen.status == "deprecated"
     ]
     if found.lags and all(late <= 0 for _, late in found.lags.values()):
@@ -196,40 +196,36 @@ def notices(found: Census) -> list[str]:
 def _hint(found: Census, name: str) -> str:
     """Why an input is absent most often, and what to do about it."""
     quantity, title = INPUT_BY_NAME[name].quantity, title_of(name)
-    reasons: Counter[Why] = Counter()
-    for prospect in found.prospects.values():
-        for (lacked, why), number in prospect.lacking.items():
-            if lacked == name:
-                reasons[why] = max(reasons[why], number)
-    seen = sorted(code for (system, code) in found.codes if _brings(system, code, quantity))
-    if found.readings(quantity) and reasons[Why.OUTSIDE_WINDOW] >= reasons[Why.NEVER_RECORDED]:
+    readings = found.readings(quantity, _BLOOD.get(name))
+    if readings:
+        apart = max(prospect.lacking[name, Why.OUTSIDE_WINDOW] for prospect in found.prospects.values())
         return (
-            f"{_capital(title)} was read {found.readings(quantity)} times, but near enough in time too seldom: at up to "
-            f"{reasons[Why.OUTSIDE_WINDOW]} anchors there was none."
+            f"{_capital(title)} was read {readings} times, but not for every patient and time: at up to {apart} "
+            "anchors there was none near enough. Send it more often, or see its window in the settings."
         )
-    wanted = " or ".join(BRINGS[name]) if name in BRINGS else "its code with a Specimen that states the blood"
-    if name == "sao2" and found.readings("spo2") and "2708-6" in seen:
+    if name == "sao2" and found.readings("spo2") and (LOINC, "2708-6") in found.codes:
         return (
             f"2708-6 was seen {found.codes[LOINC, '2708-6'].count} times, but as a vital sign: that is pulse oximetry "
             "and never stands for the saturation measured in the gas, which needs 2708-6 from the laboratory or with "
             "a Specimen."
         )
-    if seen and not found.readings(quantity):
-        return f"{', '.join(seen)} was seen, but no {title} could be read from it: see the refused codes."
-    if found.readings(quantity):
-        return f"{_capital(title)} was read for some patients or other blood only: send {wanted} for all."
+    codes = [loinc for loinc in BRINGS.get(name, ()) if (LOINC, loinc) in found.codes]
+    if codes:
+        return f"{' and '.join(codes)} was seen, but no {title} could be read from it: see below why it was refused."
+    wanted = " or ".join(BRINGS.get(name, ())) or "its code"
+    blood = " with a Specimen that says central venous" if name == "pcvo2" else ""
     flow = ""
     if name == "fio2" and found.readings("o2_flow"):
         flow = (
             f" Oxygen flow was seen (3151-8, {found.readings('o2_flow')} times); a flow is not a fraction and is not "
             "taken for one: have the fraction charted beside it."
         )
-    return f"No code for {title} was seen: send {wanted}, or map your own code to it.{flow}"
+    return f"No code for {title} was seen: send {wanted}{blood}, or map your own code to it.{flow}"
 
 
 def _refusal(code: str, seen: CodeSeen) -> str:
-    reasons = ", ".join(f"{reason} {number}" for reason, number in _ranked(seen.refused))
-    text = f"{code} ({seen.words}): {seen.refused.total()} of {seen.count} refused ({reasons})."
+    reasons = ", ".join(reason for reason, _ in _ranked(seen.refused))
+    text = f"{code} ({seen.words}): {seen.refused.total()} of {seen.count} could not be read (reason: {reasons})."
     if Reason.UNIT in seen.refused:
         text += f" Units sent: {', '.join(unit for unit, _ in _ranked(seen.units))}."
     if not seen.answers:
@@ -246,11 +242,6 @@ def _refusal(code: str, seen: CodeSeen) -> str:
     return sentence
 
 
-def _brings(system: str, code: str, quantity: str) -> bool:
-    row = code_table().get((system, code))
-    return row is not None and row.quantity == quantity
-
-
 def _capital(text: str) -> str:
     return text[:1].upper() + text[1:]
 
@@ -261,7 +252,7 @@ def _ranked(counts: Counter[Any]) -> list[tuple[Any, int]]:
 
 def _see(
     codes: dict[tuple[str, str], CodeSeen],
-    known: Collection[tuple[str, str]],
+    known: set[tuple[str, str]],
     found: Observation,
     admission: Admission,
 ) -> None:
@@ -280,7 +271,9 @@ def _see(
             end = (admission.reason or admission.bucket).value
         for place, pair in enumerate(pairs):
             seen = codes.setdefault(pair, CodeSeen(status=code_table()[pair].status if pair in code_table() else ""))
-            seen.words = seen.words or (concept.coding[place].display if concept.coding else None) or concept.text or ""
+            seen.words = (
+                seen.words or (concept.coding[place].display if concept.coding else None) or concept.text or ""
+            )
             seen.count += 1
             seen.ends[end] += 1
             if reason is not None:

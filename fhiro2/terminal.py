@@ -2,8 +2,10 @@
 
 from __future__ import annotations
 
+from collections import Counter
 from collections.abc import Sequence
 from datetime import UTC, datetime
+from textwrap import shorten
 from typing import Any
 
 from rich.console import Console
@@ -11,7 +13,7 @@ from rich.table import Table
 from rich.text import Text
 
 from fhiro2.catalogue import DERIVED_BY_CODE, MEASURED_BY_NAME, title_of
-from fhiro2.census import Census, CodeSeen, Prospect, advice, notices
+from fhiro2.census import Census, Prospect, advice, notices
 from fhiro2.errors import Bucket
 from fhiro2.model import MICROSECONDS, WHY_TEXT, Flag, Why
 
@@ -102,7 +104,7 @@ def show_flags(console: Console, flags: Sequence[Flag]) -> None:
             f"{title_of(row.name)} {row.value:g} {row.unit} (u {row.uncertainty:.2g})".replace("mm[Hg]", "mmHg")
             for row in flag.evidence
         )
-        console.print(f"      evidence: {evidence}", highlight=False)
+        console.print(f"      evidence: {evidence}", highlight=False, markup=False)
         console.print(f"      cautions: {'; '.join(flag.cautions)}", style="dim", highlight=False)
 
 
@@ -111,10 +113,8 @@ def show_census(console: Console, found: Census) -> None:
     show_possible(console, found)
     _show_sentences(console, "What would unlock most", advice(found) or ["Nothing: no value lacks an input."])
     _show_sentences(console, "What else to know of this feed", notices(found) or ["Nothing was refused."])
-    _show_codes(console, "Codes that are read", {key: seen for key, seen in found.codes.items() if seen.mapped()})
-    _show_codes(
-        console, "Codes seen but not mapped", {key: seen for key, seen in found.codes.items() if not seen.mapped()}
-    )
+    _show_codes(console, found, mapped=True)
+    _show_codes(console, found, mapped=False)
     console.print("\n[bold]Readings admitted, and minutes until known[/bold]")
     table = plain_table("readings", "quantity", "blood", "median min", "90 % min", numbers=(0, 3, 4))
     for (quantity, blood), number in sorted(found.quantities.items()):
@@ -128,17 +128,11 @@ def show_census(console: Console, found: Census) -> None:
 def show_possible(console: Console, found: Census) -> None:
     """Go or no-go for each derived value, with what the others lack."""
     console.print(f"\n[bold]What this feed allows[/bold] ({found.patients} patients with readings)")
-    table = plain_table("", "value", "computed", "at", "", "what is lacking", numbers=(2, 3))
+    table = plain_table("", "value", "computed", "what is lacking")
     for prospect in sorted(found.prospects.values(), key=lambda one: _VERDICTS.index(one.verdict())):
         kind = ANCHOR_WORDS.get(prospect.table, "anchors")
-        table.add_row(
-            prospect.verdict(),
-            DERIVED_BY_CODE[prospect.code].title,
-            str(prospect.computed),
-            str(prospect.anchors),
-            kind,
-            _lacking(prospect) if prospect.anchors else f"no {kind} in this feed",
-        )
+        count = f"{prospect.computed} of {prospect.anchors} {kind}" if prospect.anchors else f"no {kind}"
+        table.add_row(prospect.verdict(), DERIVED_BY_CODE[prospect.code].title, count, _lacking(prospect))
     console.print(table)
     console.print("go: computed at half of them or more; part: at fewer; no-go: nowhere", style="dim", highlight=False)
 
@@ -161,23 +155,31 @@ def _show_sentences(console: Console, title: str, sentences: Sequence[str]) -> N
     console.print(f"\n[bold]{title}[/bold]")
     table = plain_table("", "")
     for number, sentence in enumerate(sentences, 1):
-        table.add_row(f"{number}.", sentence)
+        table.add_row(f"{number}.", Text(sentence))
     console.print(table)
 
 
-def _show_codes(console: Console, title: str, codes: dict[tuple[str, str], CodeSeen]) -> None:
+def _show_codes(console: Console, found: Census, *, mapped: bool) -> None:
+    codes = [(pair, seen) for pair, seen in found.ranked() if seen.mapped() is mapped]
     if not codes:
         return
-    console.print(f"\n[bold]{title}[/bold]")
-    table = plain_table("count", "code", "words of the feed", "units", "what became of them", "example", numbers=(0,))
-    for (system, code), seen in sorted(codes.items(), key=lambda row: (-row[1].count, row[0]))[:MOST_CODES]:
-        units = ", ".join(f"{unit} {number}" for unit, number in seen.units.most_common(3))
-        ends = ", ".join(f"{number} {end}" for end, number in seen.ends.most_common(3))
-        words = f"{seen.words[:48]} (deprecated)" if seen.status == "deprecated" else seen.words[:48]
-        table.add_row(str(seen.count), f"{_short(system)} {code}", words, units, ends, seen.example)
+    console.print(f"\n[bold]{'Codes that are known' if mapped else 'Codes seen but not mapped'}[/bold]")
+    last = "what became of them" if mapped else "example"
+    table = plain_table("count", "code", "words of the feed", "units", last, numbers=(0,))
+    for (system, code), seen in codes[:MOST_CODES]:
+        words = shorten(seen.words, 56, placeholder=" ...") + (" (deprecated)" if seen.status == "deprecated" else "")
+        end = _shares(seen.ends) if mapped else f"Observation/{seen.example}"
+        cells = (str(seen.count), f"{_short(system)} {code}", words, _shares(seen.units), end)
+        table.add_row(*map(Text, cells))
     console.print(table)
     if len(codes) > MOST_CODES:
         console.print(f"and {len(codes) - MOST_CODES} more: --json lists all", style="dim", highlight=False)
+
+
+def _shares(counts: Counter[str]) -> str:
+    """The names counted, the commonest first, with their numbers unless there is only one."""
+    ranked = sorted(counts.items(), key=lambda row: (-row[1], row[0]))
+    return ranked[0][0] if len(ranked) == 1 else ", ".join(f"{number} {name}" for name, number in ranked)
 
 
 def show_quarantine(console: Console, lines: Sequence[dict[str, Any]]) -> None:
@@ -185,7 +187,8 @@ def show_quarantine(console: Console, lines: Sequence[dict[str, Any]]) -> None:
     table = plain_table("reason", "resource", "file", "line", "what is wrong", numbers=(3,))
     for line in lines:
         part = f" component {line['component']}" if "component" in line else ""
-        table.add_row(line["reason"], line["resource"] + part, line["file"], str(line["line"]), line["detail"])
+        cells = (line["reason"], line["resource"] + part, line["file"], str(line["line"]), line["detail"])
+        table.add_row(*map(Text, cells))
     console.print(table)
 
 

@@ -12,7 +12,7 @@ from numpy.typing import NDArray
 
 from fhiro2.catalogue import default_uncertainty
 from fhiro2.errors import Bucket, Reason
-from fhiro2.model import Fact, Integers, Names, Origins, Patient, Readings, Timelines, Truths
+from fhiro2.model import Fact, Names, Origins, Patient, Readings, Timelines, Truths
 
 _BUCKETS = tuple(Bucket)
 _REASONS = tuple(Reason)
@@ -121,7 +121,9 @@ def resolve(versions: Versions, content: Callable[[list[int]], Mapping[int, byte
     canonical content of rows; it is asked once, for the rows that nothing else can tell apart.
     """
     rows = versions.rows()
-    resolution = Resolution(np.ones(len(rows), dtype=bool), rows["bucket"].copy(), rows["reason"].copy(), rows["origin"])
+    resolution = Resolution(
+        np.ones(len(rows), dtype=bool), rows["bucket"].copy(), rows["reason"].copy(), rows["origin"]
+    )
     groups = _groups(rows)
     alike = sorted({row for group in groups for row in _alike(rows, group)})
     hashes = content(alike) if alike else {}
@@ -204,13 +206,13 @@ def panel_samples(readings: Readings, names: Names, origins: Origins, panels: Ma
 class Roster:
     """What is known of patients: by subject as written, its root patient, birth and facts."""
 
-    root: Mapping[str, str]
-    born: Mapping[str, int | None]
-    facts: Mapping[str, tuple[Fact, ...]]
+    root: dict[str, str]
+    born: dict[str, int | None]
+    facts: dict[str, tuple[Fact, ...]]
 
 
 def batches(
-    readings: Readings, names: Names, origins: Origins, roster: Roster, most_readings: int = 50_000
+    readings: Readings, names: Names, origins: Origins, roster: Roster, most_readings: int = 200_000
 ) -> Iterator[Timelines]:
     """Timelines of whole patients in the order of their keys, each batch near ``most_readings`` readings.
 

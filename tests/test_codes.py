@@ -242,7 +242,10 @@ def test_names_that_are_written_out_are_the_table_names() -> None:
 def test_pulse_oximetry_is_not_arterial_saturation() -> None:
     assert (row("59408-5").quantity, row("59408-5").specimen) == ("spo2", Specimen.NONE)
     assert (row("2708-6").quantity, row("2708-6").specimen) == ("so2", Specimen.ARTERIAL)
-    assert {code.loinc for code in READ if code.quantity == "spo2" and code.method == "legacy"} == {"2710-2", "71850-2"}
+    assert {code.loinc for code in READ if code.quantity == "spo2" and code.method == "legacy"} == {
+        "2710-2",
+        "71850-2",
+    }
 
 
 def test_a_saturation_from_pressure_is_calculated() -> None:

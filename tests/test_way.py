@@ -1,11 +1,13 @@
 """The whole way: the same bytes in any order, nothing counted twice, published numbers from NDJSON to Observation."""
 
+import copy
 import json
 import random
 import subprocess
 import sys
 from dataclasses import replace
 from functools import cache
+from itertools import pairwise
 from pathlib import Path
 from typing import Any
 
@@ -179,7 +181,7 @@ def arterial(hb: tuple[float, str], pressure: tuple[float, str], saturation: flo
 @pytest.mark.parametrize("hb", [(15, "g/dL"), (150, "g/L")])
 @pytest.mark.parametrize("pressure", [(13.3, "kPa"), (round(13.3 * MMHG_PER_KPA, 2), "mm[Hg]")])
 def test_arterial_content_by_the_tutorial(tmp_path: Path, hb: tuple[float, str], pressure: tuple[float, str]) -> None:
-    """Hb 15 g/dL, 100 %, 13.3 kPa: 20.1 bound + 0.3 dissolved = 20.4 mL/dL (AnaesthesiaUK, Oxygen content of blood)."""
+    """Hb 15 g/dL, 100 %, 13.3 kPa: 20.1 bound + 0.3 dissolved = 20.4 (AnaesthesiaUK, Oxygen content of blood)."""
     assert derived(tmp_path, arterial(hb, pressure))["59274-1"] == 20.4
 
 
@@ -193,7 +195,7 @@ def pair() -> list[dict[str, Any]]:
 
 
 def test_venous_content_delivery_uptake_and_extraction_by_the_tutorial(tmp_path: Path) -> None:
-    """Venous 75 %, 6 kPa: 15.2 mL/dL; with 5 L/min about 1000 mL/min delivered, 250 taken up, a quarter (same source)."""
+    """Venous 75 %, 6 kPa: 15.2; with 5 L/min about 1000 mL/min delivered, 250 taken up, a quarter (same source)."""
     found = derived(tmp_path, pair())
     assert found["64798-2"] == 15.2
     assert found["oxygen-delivery"] == pytest.approx(1000, rel=0.03)
@@ -243,7 +245,7 @@ def test_folding_over_any_cut_in_time_equals_the_whole(
     first, last = int(timelines.readings["effective"].min()), int(timelines.readings["effective"].max())
     edges = [timelines.start, *sorted(first + round(cut * (last - first)) for cut in cuts), timelines.stop]
     parts, carried = [], Carried()
-    for start, stop in zip(edges, edges[1:], strict=False):
+    for start, stop in pairwise(edges):
         outcome, carried = assess(replace(timelines, start=start, stop=stop), Settings(), pack(), carried)
         parts.append(outcome)
     everything, at_end = assess(timelines, Settings(), pack())
@@ -257,9 +259,7 @@ def test_any_cut_by_patient_equals_the_whole(tmp_path: Path, most_readings: int)
     intake = take_in([NdjsonSource("ward-nine", [WARD])], Settings(), mapping())
     parts = [
         assess(timelines, Settings(), pack())[0]
-        for timelines in batches(
-            intake.readings, intake.rows.names, intake.rows.origins, intake.roster, most_readings
-        )
+        for timelines in batches(intake.readings, intake.rows.names, intake.rows.origins, intake.roster, most_readings)
     ]
     assert len(parts) > 1
     whole = [assess(timelines, Settings(), pack())[0] for timelines in ward_timelines()]
@@ -306,7 +306,7 @@ def mutated(resource: Any, choose: random.Random) -> Any:
     if choose.random() < 0.4:
         del node[place[-1]]
     else:
-        node[place[-1]] = choose.choice(JUNK)
+        node[place[-1]] = copy.deepcopy(choose.choice(JUNK))
     return resource
 
 

@@ -1,6 +1,7 @@
-"""The door: what the fast reader accepts, the strict reader accepts with the same result, and both refuse the traps."""
+"""The door: what the fast reader accepts, the strict one accepts with the same result, and both refuse the traps."""
 
 import json
+from collections.abc import Callable
 
 import msgspec
 import pytest
@@ -89,6 +90,13 @@ def test_colons_in_text_are_no_keys() -> None:
     assert door.fast == 1
 
 
+def answer(read: Callable[[bytes], wire.Observation], content: bytes) -> wire.Observation | Reason:
+    try:
+        return read(content)
+    except SkipError as error:
+        return error.reason
+
+
 json_values = st.recursive(
     st.none() | st.booleans() | st.integers(-1000, 1000) | st.text(max_size=8),
     lambda children: st.lists(children, max_size=3) | st.dictionaries(st.text(max_size=6), children, max_size=3),
@@ -106,14 +114,7 @@ json_values = st.recursive(
 def test_both_readers_give_the_same_answer(changes: dict[str, object]) -> None:
     content = line(**changes)
     door = Door()
-    try:
-        found = door.observation(content)
-    except SkipError as error:
-        with pytest.raises(SkipError) as refused:
-            by_strict(content)
-        assert refused.value.reason is error.reason
-    else:
-        assert found == by_strict(content)
+    assert answer(door.observation, content) == answer(by_strict, content)
 
 
 def test_canonical_content_ignores_order_space_and_how_a_number_is_written() -> None:

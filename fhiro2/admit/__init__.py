@@ -136,7 +136,7 @@ class Admitter:
             raise
 
     def _components(self, found: Observation, setting: _Setting, used: bool) -> Admission:
-        admitted: list[tuple[int, Component, Code, Value]] = []
+        admitted: list[tuple[int, Code, Value]] = []
         refused: list[tuple[int, SkipError]] = []
         out_of_scope: SkipError | None = None
         for number, part in enumerate(found.component):
@@ -144,16 +144,16 @@ class Admitter:
                 if part.modifierExtension is not None:
                     raise SkipError(Reason.MODIFIER, "a component with an unknown modifier")
                 code = self._coder.code(part.code)
-                admitted.append((number, part, code, self._valuer.value(part, code) or Value()))
+                admitted.append((number, code, self._valuer.value(part, code) or Value()))
             except SkipError as error:
                 if error.bucket is Bucket.QUARANTINED:
                     refused.append((number, error))
                 else:
                     out_of_scope = error
         clashing = _clashing(admitted)
-        if any(code.quantity == "po2" for _, _, code, _ in admitted):
+        if any(code.quantity == "po2" for _, code, _ in admitted):
             setting = msgspec.structs.replace(setting, laboratory=True)
-        for number, part, code, value in admitted:
+        for number, code, value in admitted:
             if (code.quantity, code.specimen) in clashing:
                 refused.append((number, SkipError(Reason.CONFLICT, "one quantity twice with different values")))
                 continue
@@ -388,10 +388,10 @@ def _blood(code: Specimen, specimen: Specimen, site: Specimen) -> tuple[Specimen
     return blood, int(evidence)
 
 
-def _clashing(admitted: list[tuple[int, Component, Code, Value]]) -> set[tuple[str, Specimen]]:
+def _clashing(admitted: list[tuple[int, Code, Value]]) -> set[tuple[str, Specimen]]:
     seen: dict[tuple[str, Specimen], Value] = {}
     clashing = set()
-    for _, _, code, value in admitted:
+    for _, code, value in admitted:
         first = seen.setdefault((code.quantity, code.specimen), value)
         if first is not value and repr(first) != repr(value):
             clashing.add((code.quantity, code.specimen))

@@ -240,6 +240,11 @@ class Context:
             for row in entry:
                 self.facts.setdefault(row.subject, []).append(row.fact)
 
+    def note_alias(self, full_url: str, reference: str) -> None:
+        """Note which resource a Bundle calls ``full_url``; one URL for two resources names neither."""
+        if self.aliases.setdefault(full_url, reference) != reference:
+            self.aliases[full_url] = ""
+
     def patient_of(self, system: str, value: str) -> str | None:
         """The one patient who has this identifier, else None."""
         found = self._by_identifier.get((system, value), set())

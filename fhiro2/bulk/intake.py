@@ -3,101 +3,46 @@
 from __future__ import annotations
 
 import gc
-import hashlib
-from collections.abc import Callable, Iterator, Sequence
+from collections.abc import Callable, Sequence
 from dataclasses import dataclass, field
-from typing import Any, NamedTuple
+from typing import Any
 
 import msgspec
 import numpy as np
 
 from fhiro2.account import Account
 from fhiro2.admit import Admission, Admitter, is_own
-from fhiro2.admit.coding import Coder, site_table
+from fhiro2.admit.coding import Coder, Table, site_table
 from fhiro2.admit.context import CONTEXT_TYPES, Context, Entry, Interpreter
 from fhiro2.admit.moment import moment
 from fhiro2.admit.rows import Rows
 from fhiro2.admit.value import Valuer
+from fhiro2.bulk.book import Book, standing_origins
 from fhiro2.bulk.quarantine import Quarantine
-from fhiro2.codes import CONSCIOUSNESS, code_table
+from fhiro2.bulk.unit import OBSERVATION, Unit, observations, units
+from fhiro2.codes import CONSCIOUSNESS, LOINC, code_table
 from fhiro2.errors import Bucket, Reason, SkipError, StopError
-from fhiro2.fhir.wire import Door, Observation, canonical, read_strictly
-from fhiro2.model import Fact, Readings
-from fhiro2.read import Raw, Source
+from fhiro2.fhir.wire import Door, Observation
+from fhiro2.model import Fact, Integers, Readings
+from fhiro2.read import Source
 from fhiro2.settings import Mapping, Settings
-from fhiro2.timeline import NEVER_UPDATED, Resolution, Roster, Versions, panel_samples, resolve
+from fhiro2.timeline import NEVER_UPDATED, Roster, panel_samples
 
-_OBSERVATION = b'{"resourceType":"Observation"'
-_BUNDLE = b'"Bundle"'
+_COLLECT_EVERY = 200_000
+"""New objects between two garbage collections while reading: rows make no cycles, looking for them costs a tenth."""
+
+Watch = Callable[[Observation, Admission], None]
 
 
 @dataclass
 class Intake:
     """All that was read: standing readings, what they came from, who the patients are, and the account so far."""
 
-    rows: Rows
-    readings: Readings
-    roster: Roster
-    account: Account
-    doors: tuple[Door, Door]
-
-
-class _Unit(NamedTuple):
-    """One resource: a line, or an entry of a Bundle (numbered from 0; -1 for a line) with its full URL."""
-
-    content: bytes
-    raw: Raw
-    entry: int = -1
-    full_url: str = ""
-    fault: SkipError | None = None
-
-
-@dataclass
-class _Book:
-    """The versions received in one pass over one source, with their places, so that any can be read again."""
-
-    source: Source
-    versions: Versions = field(default_factory=Versions)
-
-    def add(self, unit: _Unit, label: _Label, admission: Admission, origin: int = -1) -> int:
-        return self.versions.add(
-            label.key,
-            label.version,
-            label.updated,
-            hash(unit.content),
-            admission.bucket,
-            admission.reason,
-            origin,
-            (unit.raw.file, unit.raw.line, unit.entry),
-        )
-
-    def hashes(self, rows: list[int]) -> dict[int, bytes]:
-        """SHA-256 of the canonical content of some rows, read again from their places."""
-        places = self.versions.rows()[["file", "line", "entry"]][rows].tolist()
-        wanted = dict(zip(places, rows, strict=True))
-        touched = {place[:2] for place in places}
-        found: dict[int, bytes] = {}
-        for raw in self.source.read():
-            if (raw.file, raw.line) in touched:
-                for unit in _units(raw):
-                    row = wanted.get((raw.file, raw.line, unit.entry))
-                    if row is not None:
-                        found[row] = _digest(unit.content)
-        return found
-
-
-class _Label(NamedTuple):
-    """What names a version: key ('' without identity), versionId and lastUpdated in microseconds."""
-
-    key: str
-    version: str
-    updated: int
-
-
-_COLLECT_EVERY = 200_000
-"""New objects between two garbage collections while reading: rows make no cycles, looking for them costs a tenth."""
-
-Watch = Callable[[Observation, Admission], None]
+    rows: Rows = field(default_factory=Rows)
+    readings: Readings = field(default_factory=lambda: Rows().readings())
+    roster: Roster = field(default_factory=lambda: Roster({}, {}, {}))
+    account: Account = field(default_factory=Account)
+    doors: tuple[Door, Door] = field(default_factory=lambda: (Door(), Door()))
 
 
 def take_in(
@@ -127,204 +72,98 @@ def _take_in(
     watch: Watch | None,
 ) -> Intake:
     zone = settings.zone or mapping.zone
-    interpreter = Interpreter(mapping, zone)
-    coder = Coder(_site_codes(mapping))
-    rows, account = Rows(), Account()
-    doors = Door(), Door()
-    root: dict[str, str] = {}
-    born: dict[str, int | None] = {}
-    facts: dict[str, tuple[Fact, ...]] = {}
-    stands: list[int] = []
-    received = 0
+    interpreter, coder = Interpreter(mapping, zone), Coder(_codes(mapping))
+    found, stands, received = Intake(), list[Integers](), 0
     for source in sources:
-        valuer = Valuer(
-            {(row.system, row.code): (row.quantity, CONSCIOUSNESS.index(row.answer)) for row in mapping.answers},
-            {row.loinc: row.unit for row in mapping.default_units if row.source == source.name},
+        first, second = Book(source, quarantine), Book(source, quarantine)
+        context = _context(first, interpreter, found)
+        admitter = Admitter(
+            source.name,
+            found.rows,
+            context,
+            interpreter,
+            coder,
+            _valuer(source.name, mapping),
+            zone,
+            settings.base_urls,
         )
-        context, book = _context(source, interpreter, doors[0], account, quarantine)
-        received += book.versions.count
-        admitter = Admitter(source.name, rows, context, interpreter, coder, valuer, zone, settings.base_urls)
-        observations = _observations(source, admitter, rows, doors[1], account, quarantine, watch, stands)
-        received += observations.versions.count
-        _describe(source.name, context, root, born, facts)
-    account.check(received)
-    readings = rows.readings()
-    readings = readings[np.isin(readings["origin"], np.array(stands, dtype=np.int64))]
-    panel_samples(readings, rows.names, rows.origins, rows.panels)
-    return Intake(rows, readings, Roster(root, born, facts), account, doors)
+        stands.append(_observations(second, admitter, found, watch))
+        _describe(source.name, context, found.roster)
+        received += first.versions.count + second.versions.count
+    found.account.check(received)
+    readings = found.rows.readings()
+    standing = np.zeros(len(found.rows.origins.ids), dtype=bool)
+    for origins in stands:
+        standing[origins] = True
+    found.readings = readings if standing.all() else readings[standing[readings["origin"]]]
+    panel_samples(found.readings, found.rows.names, found.rows.origins, found.rows.panels)
+    return found
 
 
-def _context(
-    source: Source, interpreter: Interpreter, door: Door, account: Account, quarantine: Quarantine | None
-) -> tuple[Context, _Book]:
+def _context(book: Book, interpreter: Interpreter, found: Intake) -> Context:
     """First pass: everything that is not an Observation."""
-    book, context = _Book(source), Context()
+    context = Context()
     stated: dict[int, tuple[str, Entry]] = {}
     excluded: dict[int, str] = {}
-    for raw in source.read(leave_out=_OBSERVATION):
-        if raw.content.startswith(_OBSERVATION) and raw.fault is not Reason.SIZE:
+    for raw in book.source.read(leave_out=OBSERVATION):
+        if raw.content.startswith(OBSERVATION) and raw.fault is not Reason.SIZE:
             continue
-        for unit in _units(raw):
+        for unit in units(raw):
             try:
-                resource = _resource(unit, door)
+                resource = unit.resource(found.doors[0])
             except SkipError as error:
-                _place(book, unit, _Label("", "", NEVER_UPDATED), error, quarantine, {})
+                book.refuse(unit, error)
                 continue
-            _note_alias(context, unit, resource)
-            kind = resource.get("resourceType")
-            if kind == "Observation":
+            key, version, updated = _label(resource, unit)
+            if unit.full_url:
+                context.note_alias(unit.full_url, key)
+            if resource.get("resourceType") == "Observation":
                 continue
-            label = _label(resource, unit)
             try:
                 entry = _entry(resource, interpreter)
             except SkipError as error:
-                row = _place(book, unit, label, error, quarantine, resource)
+                row = book.refuse(unit, error, key, version, updated)
                 if error.reason is Reason.EXCLUDED_PATIENT:
-                    excluded[row] = label.key
+                    excluded[row] = key
                 continue
-            stated[book.add(unit, label, Admission(Bucket.USED))] = label.key, entry
-    resolution = resolve(book.versions, book.hashes)
-    _close(resolution, account, quarantine)
+            stated[book.add(unit, key, version, updated, Admission(Bucket.USED))] = key, entry
+    stands = book.close(found.account).stands
     for row, (key, entry) in stated.items():
-        if resolution.stands[row]:
+        if stands[row]:
             context.add(key, entry)
-    context.excluded.update(key for row, key in excluded.items() if resolution.stands[row])
-    return context, book
+    context.excluded.update(key for row, key in excluded.items() if stands[row])
+    return context
 
 
-def _observations(
-    source: Source,
-    admitter: Admitter,
-    rows: Rows,
-    door: Door,
-    account: Account,
-    quarantine: Quarantine | None,
-    watch: Watch | None,
-    stands: list[int],
-) -> _Book:
-    """Second pass: Observations. ``stands`` gains the origins whose version stands."""
-    book = _Book(source)
-    parts: dict[int, tuple[Reason, ...]] = {}
-    for raw in source.read():
-        first = raw.content.startswith(_OBSERVATION)
+def _observations(book: Book, admitter: Admitter, found: Intake, watch: Watch | None) -> Integers:
+    """Second pass: Observations. Returns the origins whose version stands."""
+    read, admit, given = found.doors[1].observation, admitter.admit, found.rows.origins.ids
+    for raw in book.source.read():
         if raw.fault is Reason.SIZE:
             continue
-        for unit in (_Unit(raw.content, raw),) if first else _units(raw):
-            if not first and not _is_observation(unit):
-                continue
-            origin = len(rows.origins.ids)
+        plain = raw.content.startswith(OBSERVATION)
+        for unit in (Unit(raw.content, (raw.file, raw.line, -1), "", raw.fault),) if plain else observations(raw):
+            origin = len(given)
             try:
-                found = door.observation(unit.content)
-                if found.id is None and unit.full_url:
-                    found = msgspec.structs.replace(found, id=unit.full_url.rpartition(":")[2])
-                label = _observation_label(found, unit)
-                admission = admitter.admit(found)
-                if watch is not None:
-                    watch(found, admission)
+                resource = read(unit.content)
             except SkipError as error:
-                reason = Reason.TRUNCATED if raw.fault and error.reason is Reason.JSON else error.reason
-                label, admission = _Label("", "", NEVER_UPDATED), Admission(Bucket.QUARANTINED, reason, error.detail)
-            given = origin if len(rows.origins.ids) > origin else -1
-            row = book.add(unit, label, admission, given)
-            if admission.bucket is Bucket.QUARANTINED and quarantine is not None:
-                quarantine.keep(row, source, unit.raw, label.key, admission.reason, admission.detail, unit.content)
-            if admission.parts:
-                parts[row] = tuple(refused.reason for _, refused in admission.parts)
-                if quarantine is not None:
-                    for number, refused in admission.parts:
-                        quarantine.keep(
-                            row, source, unit.raw, label.key, refused.reason, refused.detail, unit.content, number
-                        )
-    resolution = resolve(book.versions, book.hashes)
-    _close(resolution, account, quarantine)
-    stands.extend(resolution.origin[resolution.stands & (resolution.origin >= 0)].tolist())
-    for row, reasons in parts.items():
-        if resolution.stands[row]:
-            account.parts.update(reasons)
-    return book
-
-
-def _close(resolution: Resolution, account: Account, quarantine: Quarantine | None) -> None:
-    for bucket, reason, number in resolution.counts():
-        account.place(bucket, reason, number)
-    if quarantine is not None:
-        quarantine.settle(resolution)
-
-
-def _place(
-    book: _Book,
-    unit: _Unit,
-    label: _Label,
-    error: SkipError,
-    quarantine: Quarantine | None,
-    resource: dict[str, Any],
-) -> int:
-    admission = Admission(error.bucket, error.reason, error.detail)
-    row = book.add(unit, label, admission)
-    if admission.bucket is Bucket.QUARANTINED and quarantine is not None:
-        name = label.key or str(resource.get("resourceType", ""))
-        quarantine.keep(row, book.source, unit.raw, name, error.reason, error.detail, unit.content)
-    return row
-
-
-def _units(raw: Raw) -> Iterator[_Unit]:
-    """The resources in one raw line: itself, or the entries of a Bundle."""
-    if raw.fault is Reason.SIZE:
-        yield _Unit(raw.content, raw, fault=SkipError(Reason.SIZE, "larger than what is read"))
-        return
-    if _BUNDLE not in raw.content[:4096]:
-        yield _Unit(raw.content, raw)
-        return
-    try:
-        bundle = msgspec.json.decode(raw.content, type=_Bundle)
-    except (msgspec.MsgspecError, UnicodeDecodeError, RecursionError):
-        yield _Unit(raw.content, raw)
-        return
-    if bundle.resourceType != "Bundle":
-        yield _Unit(raw.content, raw)
-        return
-    for number, entry in enumerate(bundle.entry):
-        if entry.resource is not None:
-            yield _Unit(bytes(entry.resource), raw, number, entry.fullUrl or "")
-
-
-class _Entry(msgspec.Struct):
-    fullUrl: str | None = None  # noqa: N815
-    resource: msgspec.Raw | None = None
-
-
-class _Bundle(msgspec.Struct):
-    resourceType: str = ""  # noqa: N815
-    entry: tuple[_Entry, ...] = ()
-
-
-class _Kind(msgspec.Struct):
-    resourceType: str = ""  # noqa: N815
-
-
-_KIND: Callable[[bytes], _Kind] = msgspec.json.Decoder(_Kind).decode
-
-
-def _is_observation(unit: _Unit) -> bool:
-    """Whether the first pass left this unit to the second: it is readable and says that it is an Observation."""
-    try:
-        if _KIND(unit.content).resourceType != "Observation":
-            return False
-        Door().resource(unit.content)
-    except (msgspec.MsgspecError, UnicodeDecodeError, RecursionError, SkipError):
-        return False
-    return True
-
-
-def _resource(unit: _Unit, door: Door) -> dict[str, Any]:
-    if unit.fault is not None:
-        raise unit.fault
-    try:
-        return door.resource(unit.content)
-    except SkipError as error:
-        if unit.raw.fault is Reason.TRUNCATED and error.reason is Reason.JSON:
-            raise SkipError(Reason.TRUNCATED, "the file ends in the middle of this line") from None
-        raise
+                book.refuse(unit, unit.refusal(error))
+                continue
+            if resource.id is None:
+                resource = msgspec.structs.replace(resource, id=unit.named_id() or None)
+            admission = admit(resource)
+            if watch is not None:
+                watch(resource, admission)
+            meta = resource.meta
+            book.add(
+                unit,
+                resource.id or "",
+                meta.versionId or "" if meta is not None else "",
+                NEVER_UPDATED if meta is None or meta.lastUpdated is None else _updated(meta.lastUpdated),
+                admission,
+                origin if len(given) > origin else -1,
+            )
+    return standing_origins(book.close(found.account))
 
 
 def _entry(resource: dict[str, Any], interpreter: Interpreter) -> Entry:
@@ -348,72 +187,53 @@ def _own_provenance(resource: dict[str, Any]) -> bool:
     )
 
 
-def _label(resource: dict[str, Any], unit: _Unit) -> _Label:
+def _label(resource: dict[str, Any], unit: Unit) -> tuple[str, str, int]:
+    """Key ('' without identity), versionId and lastUpdated of a resource; an id may come from its full URL."""
+    if resource.get("id") is None and unit.named_id():
+        resource["id"] = unit.named_id()
     kind, identity, meta = resource.get("resourceType"), resource.get("id"), resource.get("meta")
-    if identity is None and unit.full_url.startswith("urn:uuid:"):
-        identity = resource["id"] = unit.full_url.rpartition(":")[2]
     if not isinstance(kind, str) or not isinstance(identity, str):
-        return _Label("", "", NEVER_UPDATED)
+        return "", "", NEVER_UPDATED
     version = meta.get("versionId") if isinstance(meta, dict) else None
     updated = meta.get("lastUpdated") if isinstance(meta, dict) else None
-    return _Label(f"{kind}/{identity}", version if isinstance(version, str) else "", _updated(updated))
+    return (
+        f"{kind}/{identity}",
+        version if isinstance(version, str) else "",
+        _updated(updated) if isinstance(updated, str) else NEVER_UPDATED,
+    )
 
 
-def _observation_label(found: Observation, unit: _Unit) -> _Label:
-    if found.id is None:
-        return _Label("", "", NEVER_UPDATED)
-    meta = found.meta
-    if meta is None:
-        return _Label(found.id, "", NEVER_UPDATED)
-    return _Label(found.id, meta.versionId or "", _updated(meta.lastUpdated))
-
-
-def _updated(text: Any) -> int:
+def _updated(text: str) -> int:
     try:
-        return moment(text, None)[0] if isinstance(text, str) else NEVER_UPDATED
+        return moment(text, None)[0]
     except SkipError:
         return NEVER_UPDATED
 
 
-def _note_alias(context: Context, unit: _Unit, resource: dict[str, Any]) -> None:
-    kind = resource.get("resourceType")
-    identity = resource.get("id") or unit.full_url.rpartition(":")[2]
-    if unit.full_url and isinstance(kind, str) and kind in CONTEXT_TYPES:
-        target = f"{kind}/{identity}"
-        known = context.aliases.setdefault(unit.full_url, target)
-        if known != target:
-            context.aliases[unit.full_url] = ""
-
-
-def _describe(
-    source: str,
-    context: Context,
-    root: dict[str, str],
-    born: dict[str, int | None],
-    facts: dict[str, tuple[Fact, ...]],
-) -> None:
+def _describe(source: str, context: Context, roster: Roster) -> None:
     """Enter a source's patients into the roster under their keys."""
     merged = context.merged()
     for old, target in merged.items():
-        root[f"{source}|{old}"] = f"{source}|{target}"
+        roster.root[f"{source}|{old}"] = f"{source}|{target}"
     for reference, entry in context.patients.items():
-        born[f"{source}|{reference}"] = entry.born
+        roster.born[f"{source}|{reference}"] = entry.born
+    gathered: dict[str, set[Fact]] = {}
     for subject, stated in context.facts.items():
-        key = f"{source}|{merged.get(subject, subject)}"
-        rows = sorted({*facts.get(key, ()), *stated}, key=lambda one: (one.fact, one.start, one.end, one.answer))
-        facts[key] = tuple(rows)
+        gathered.setdefault(f"{source}|{merged.get(subject, subject)}", set()).update(stated)
+    for key, facts in gathered.items():
+        roster.facts[key] = tuple(sorted(facts, key=lambda one: (one.fact, one.start, one.end, one.answer)))
 
 
-def _site_codes(mapping: Mapping) -> Any:
+def _valuer(source: str, mapping: Mapping) -> Valuer:
+    return Valuer(
+        {(row.system, row.code): (row.quantity, CONSCIOUSNESS.index(row.answer)) for row in mapping.answers},
+        {row.loinc: row.unit for row in mapping.default_units if row.source == source},
+    )
+
+
+def _codes(mapping: Mapping) -> Table:
     shipped = code_table()
     for row in mapping.codes:
-        if ("http://loinc.org", row.loinc) not in shipped:
+        if (LOINC, row.loinc) not in shipped:
             raise StopError(f"mapping {mapping.mapping}: {row.code} means LOINC {row.loinc}, which is not shipped")
     return site_table(shipped, {(row.system, row.code): row.loinc for row in mapping.codes})
-
-
-def _digest(content: bytes) -> bytes:
-    try:
-        return hashlib.sha256(canonical(read_strictly(content))).digest()
-    except SkipError:
-        return hashlib.sha256(content).digest()

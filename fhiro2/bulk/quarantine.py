@@ -7,7 +7,7 @@ from pathlib import Path
 from typing import Any
 
 from fhiro2.errors import Bucket, Reason
-from fhiro2.read import Raw, Source
+from fhiro2.read import Source
 from fhiro2.timeline import Resolution
 
 
@@ -25,7 +25,7 @@ class Quarantine:
         self,
         row: int,
         source: Source,
-        raw: Raw,
+        place: tuple[int, int, int],
         resource: str,
         reason: Reason | None,
         detail: str,
@@ -35,13 +35,15 @@ class Quarantine:
         """Keep one refused resource (or its component ``part``) until it is known whether its version stands."""
         line: dict[str, Any] = {
             "source": source.name,
-            "file": _file_name(source, raw.file),
-            "line": raw.line,
+            "file": _file_name(source, place[0]),
+            "line": place[1],
             "resource": resource,
             "reason": str(reason),
             "detail": detail,
             "raw": content.decode("utf-8", "backslashreplace"),
         }
+        if place[2] >= 0:
+            line["entry"] = place[2]
         if part is not None:
             line["component"] = part
         self._stream.write(f"{row}\t{int(part is not None)}\t{json.dumps(line, ensure_ascii=True)}\n")

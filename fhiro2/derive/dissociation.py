@@ -19,8 +19,8 @@ _REFERENCE_PRESSURE = 7.0
 _CENTRE_LOGIT = 1.8747
 """ln(s / (1 - s)) at the curve's centre."""
 
-_STEPS = 52
-"""Halvings of a bracket of width 1: what is left is below the spacing of doubles near 1."""
+_STEPS = 46
+"""Halvings of a bracket: what is left of a width of 1 is 1e-14, and curve and inverse stay a pair to 1e-9."""
 
 
 def saturation(

@@ -1,0 +1,74 @@
+"""The versions received in one pass over one source: where each was found, where it ended, what was refused in it."""
+
+from __future__ import annotations
+
+from fhiro2.account import Account
+from fhiro2.admit import Admission
+from fhiro2.bulk.quarantine import Quarantine
+from fhiro2.bulk.unit import Unit, content_hash, units
+from fhiro2.errors import Bucket, Reason, SkipError
+from fhiro2.model import Integers
+from fhiro2.read import Source
+from fhiro2.timeline import NEVER_UPDATED, Resolution, Versions, resolve
+
+
+class Book:
+    """One row a received version; ``close`` resolves them and enters each into the account once."""
+
+    def __init__(self, source: Source, quarantine: Quarantine | None) -> None:
+        self.source = source
+        self.versions = Versions()
+        self._quarantine = quarantine
+        self._parts: dict[int, tuple[Reason, ...]] = {}
+
+    def add(self, unit: Unit, key: str, version: str, updated: int, admission: Admission, origin: int = -1) -> int:
+        """Enter one version; what was refused, whole or in part, is kept for another try."""
+        bucket, reason, detail, parts = admission
+        row = self.versions.add(key, version, updated, hash(unit.content), bucket, reason, origin, unit.place)
+        if parts:
+            self._parts[row] = tuple(error.reason for _, error in parts)
+        if self._quarantine is not None and (parts or bucket is Bucket.QUARANTINED):
+            if bucket is Bucket.QUARANTINED:
+                self._quarantine.keep(row, self.source, unit.place, key, reason, detail, unit.content)
+            for number, error in parts:
+                self._quarantine.keep(
+                    row, self.source, unit.place, key, error.reason, error.detail, unit.content, number
+                )
+        return row
+
+    def refuse(
+        self, unit: Unit, error: SkipError, key: str = "", version: str = "", updated: int = NEVER_UPDATED
+    ) -> int:
+        """Enter a version that gave nothing, for the reason in ``error``."""
+        return self.add(unit, key, version, updated, Admission(error.bucket, error.reason, error.detail))
+
+    def close(self, account: Account) -> Resolution:
+        """Decide which versions stand, and count every version into its final bucket."""
+        resolution = resolve(self.versions, self._hashes)
+        for bucket, reason, number in resolution.counts():
+            account.place(bucket, reason, number)
+        for row, reasons in self._parts.items():
+            if resolution.stands[row]:
+                account.parts.update(reasons)
+        if self._quarantine is not None:
+            self._quarantine.settle(resolution)
+        return resolution
+
+    def _hashes(self, rows: list[int]) -> dict[int, bytes]:
+        """Content hashes of some rows, read again from their places."""
+        places: list[tuple[int, int, int]] = self.versions.rows()[["file", "line", "entry"]][rows].tolist()
+        wanted = dict(zip(places, rows, strict=True))
+        touched = {place[:2] for place in places}
+        return {
+            wanted[unit.place]: content_hash(unit.content)
+            for raw in self.source.read()
+            if (raw.file, raw.line) in touched
+            for unit in units(raw)
+            if unit.place in wanted
+        }
+
+
+def standing_origins(resolution: Resolution) -> Integers:
+    """The origins whose version stands."""
+    found: Integers = resolution.origin[resolution.stands & (resolution.origin >= 0)]
+    return found

@@ -1,0 +1,105 @@
+"""The unit of the account: one resource version, as a line or as an entry of a Bundle."""
+
+from __future__ import annotations
+
+import hashlib
+from collections.abc import Iterator
+from typing import NamedTuple
+
+import msgspec
+
+from fhiro2.errors import Reason, SkipError
+from fhiro2.fhir.wire import Door, canonical, read_strictly
+from fhiro2.read import Raw
+
+OBSERVATION = b'{"resourceType":"Observation"'
+"""How nearly every line with an Observation begins; others are looked into."""
+
+_BUNDLE = b'"Bundle"'
+_BUNDLE_WITHIN = 4096
+_URN = "urn:uuid:"
+
+
+class Unit(NamedTuple):
+    """One resource: its bytes, its place (file, line, entry of a Bundle or -1), its full URL, its fault."""
+
+    content: bytes
+    place: tuple[int, int, int]
+    full_url: str = ""
+    fault: Reason | None = None
+
+    def named_id(self) -> str:
+        """The id that a resource without one takes from its full URL; '' where that is no UUID."""
+        return self.full_url.removeprefix(_URN) if self.full_url.startswith(_URN) else ""
+
+    def resource(self, door: Door) -> dict[str, object]:
+        """The resource as a dictionary; raises SkipError."""
+        if self.fault is Reason.SIZE:
+            raise SkipError(Reason.SIZE, "larger than what is read")
+        try:
+            return door.resource(self.content)
+        except SkipError as error:
+            raise self.refusal(error) from None
+
+    def refusal(self, error: SkipError) -> SkipError:
+        """The error with its true cause: what breaks off at the end of a file was cut, not badly written."""
+        if self.fault is Reason.TRUNCATED and error.reason is Reason.JSON:
+            return SkipError(Reason.TRUNCATED, "the file ends in the middle of this line")
+        return error
+
+
+class _Entry(msgspec.Struct):
+    fullUrl: str | None = None  # noqa: N815
+    resource: msgspec.Raw | None = None
+
+
+class _Bundle(msgspec.Struct):
+    resourceType: str = ""  # noqa: N815
+    entry: tuple[_Entry, ...] = ()
+
+
+class _Kind(msgspec.Struct):
+    resourceType: str = ""  # noqa: N815
+
+
+_BUNDLE_OF = msgspec.json.Decoder(_Bundle)
+_KIND_OF = msgspec.json.Decoder(_Kind)
+_UNREADABLE = (msgspec.MsgspecError, UnicodeDecodeError, RecursionError)
+
+
+def units(raw: Raw) -> Iterator[Unit]:
+    """The resources in one raw line: itself, or the entries of a Bundle."""
+    whole = Unit(raw.content, (raw.file, raw.line, -1), "", raw.fault)
+    if raw.fault is Reason.SIZE or _BUNDLE not in raw.content[:_BUNDLE_WITHIN]:
+        yield whole
+        return
+    try:
+        bundle = _BUNDLE_OF.decode(raw.content)
+    except _UNREADABLE:
+        yield whole
+        return
+    if bundle.resourceType != "Bundle":
+        yield whole
+        return
+    for number, entry in enumerate(bundle.entry):
+        if entry.resource is not None:
+            yield Unit(bytes(entry.resource), (raw.file, raw.line, number), entry.fullUrl or "")
+
+
+def observations(raw: Raw) -> Iterator[Unit]:
+    """The units of a raw line that are Observations and could be read as a resource at all."""
+    for unit in units(raw):
+        try:
+            if unit.fault is not Reason.SIZE and _KIND_OF.decode(unit.content).resourceType == "Observation":
+                unit.resource(Door())
+                yield unit
+        except (*_UNREADABLE, SkipError):
+            continue
+
+
+def content_hash(content: bytes) -> bytes:
+    """SHA-256 of the canonical content of a resource, of its bytes where it cannot be read."""
+    try:
+        return hashlib.sha256(canonical(read_strictly(content))).digest()
+    except SkipError:
+        return hashlib.sha256(content).digest()
