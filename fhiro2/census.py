@@ -26,7 +26,6 @@ from fhiro2.timeline import batches
 
 MOST_STEPS = 5
 _TOGETHER = 2  # inputs asked for in one step, unless every value lacks more
-_SNOMED = "http://snomed.info/sct"
 BRINGS: dict[str, tuple[str, ...]] = {
     "pao2": ("2703-7",),
     "paco2": ("2019-8",),
@@ -231,15 +230,13 @@ def _refusal(code: str, seen: CodeSeen) -> str:
     if not seen.answers:
         return f"{text} Look at one with quarantine list after a replay, for example {seen.example}."
     (system, answer, words), _ = _ranked(seen.answers)[0]
-    terms = "SNOMED CT" if system == _SNOMED else system or "no system"
-    sentence = (
-        f"{text} Its answers are coded in {terms} (such as {answer} {words}): say under answers in the site's mapping "
-        "what each of them means."
-    )
+    terms = "SNOMED CT" if system == "http://snomed.info/sct" else system or "no system"
+    text += f" Its answers are coded in {terms} (such as {answer} {words}): say under answers in the site's mapping "
+    text += "what each of them means."
     row = code_table().get((LOINC, code))
     if row is not None and all(one.quantity != row.quantity for one in INPUTS):
-        sentence += " No value of this version needs it."
-    return sentence
+        text += " No value of this version needs it."
+    return text
 
 
 def _capital(text: str) -> str:

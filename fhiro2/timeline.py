@@ -106,6 +106,10 @@ class Resolution:
         """Take a version out of what stands."""
         self.stands[row], self.bucket[row], self.reason[row] = False, _BUCKET_NUMBER[bucket], _REASON_NUMBER[reason]
 
+    def torn(self) -> NDArray[np.intp]:
+        """The versions that were refused for having two contents."""
+        return np.flatnonzero(~self.stands & (self.bucket == _BUCKET_NUMBER[Bucket.QUARANTINED]))
+
     def counts(self) -> Iterator[tuple[Bucket, Reason | None, int]]:
         """How many versions ended in each bucket for each reason."""
         pairs, numbers = np.unique(np.stack([self.bucket, self.reason]), axis=1, return_counts=True)

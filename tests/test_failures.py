@@ -159,7 +159,7 @@ def test_c07_a_comparator_becomes_a_bound(comparator: str, value: float, low: fl
 def test_c07_a_bound_stays_a_bound_in_what_is_derived() -> None:
     """Content rises with the saturation, so from at most 75 % it is at most that of 75 % (definition of a bound)."""
     hb, bound = observation("hb", "718-7", 15, "g/dL"), quantity(75, "%", comparator="<")
-    gas = (observation("po2", value=40), hb)
+    gas = (observation("po2", value=60), hb)
     found = pair(*gas, observation("so2", "2708-6", None, valueQuantity=bound)).column("oxygen-content-arterial")
     sharp = pair(*gas, observation("so2", "2708-6", 75, "%")).value("oxygen-content-arterial")
     assert found.value[0] != found.value[0]

@@ -20,7 +20,7 @@ from fhiro2.catalogue import QUANTITY
 from fhiro2.codes import Code
 from fhiro2.errors import Bucket, Reason, SkipError
 from fhiro2.fhir.systems import IDENTIFIERS, OBSERVATION_CATEGORY
-from fhiro2.fhir.wire import Component, Observation, Reference, canonical
+from fhiro2.fhir.wire import Observation, Reference, canonical
 from fhiro2.model import MINUTE, Caution, Kind, Specimen, SpecimenEvidence
 
 NAN: Final = float("nan")

@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from collections.abc import Iterator
+
 from fhiro2.account import Account
 from fhiro2.admit import Admission
 from fhiro2.bulk.quarantine import Quarantine
@@ -51,21 +53,28 @@ class Book:
             if resolution.stands[row]:
                 account.parts.update(reasons)
         if self._quarantine is not None:
-            self._quarantine.settle(resolution)
+            self._quarantine.settle(lambda row: bool(resolution.stands[row]))
+            for row, unit in self._again(resolution.torn().tolist()):
+                detail = "this version came with two contents"
+                self._quarantine.keep(row, self.source, unit.place, "", Reason.VERSION, detail, unit.content)
+            self._quarantine.settle(lambda row: True)
         return resolution
 
     def _hashes(self, rows: list[int]) -> dict[int, bytes]:
-        """Content hashes of some rows, read again from their places."""
+        return {row: content_hash(unit.content) for row, unit in self._again(rows)}
+
+    def _again(self, rows: list[int]) -> Iterator[tuple[int, Unit]]:
+        """Some rows' units, read again from their places."""
+        if not rows:
+            return
         places: list[tuple[int, int, int]] = self.versions.rows()[["file", "line", "entry"]][rows].tolist()
         wanted = dict(zip(places, rows, strict=True))
         touched = {place[:2] for place in places}
-        return {
-            wanted[unit.place]: content_hash(unit.content)
-            for raw in self.source.read()
-            if (raw.file, raw.line) in touched
-            for unit in units(raw)
-            if unit.place in wanted
-        }
+        for raw in self.source.read():
+            if (raw.file, raw.line) in touched:
+                for unit in units(raw):
+                    if unit.place in wanted:
+                        yield wanted[unit.place], unit
 
 
 def standing_origins(resolution: Resolution) -> Integers:

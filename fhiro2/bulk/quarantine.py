@@ -3,12 +3,12 @@
 from __future__ import annotations
 
 import json
+from collections.abc import Callable
 from pathlib import Path
 from typing import Any
 
-from fhiro2.errors import Bucket, Reason
+from fhiro2.errors import Reason
 from fhiro2.read import Source
-from fhiro2.timeline import Resolution
 
 
 class Quarantine:
@@ -46,15 +46,14 @@ class Quarantine:
             line["entry"] = place[2]
         if part is not None:
             line["component"] = part
-        self._stream.write(f"{row}\t{int(part is not None)}\t{json.dumps(line, ensure_ascii=True)}\n")
+        self._stream.write(f"{row}\t{json.dumps(line, ensure_ascii=True)}\n")
 
-    def settle(self, resolution: Resolution) -> None:
-        """Move the kept lines whose version stands (or stays quarantined) to the file; drop the replaced ones."""
+    def settle(self, standing: Callable[[int], bool]) -> None:
+        """Move the kept lines of standing versions to the file, and drop the replaced ones."""
         self._stream.seek(0)
         for kept in self._stream:
-            row, part, line = kept.split("\t", 2)
-            bucket, _ = resolution.standing(int(row))
-            if bucket is (Bucket.USED if part == "1" else Bucket.QUARANTINED):
+            row, line = kept.split("\t", 1)
+            if standing(int(row)):
                 self._settled.write(line)
         self._stream.seek(0)
         self._stream.truncate()
