@@ -9,6 +9,7 @@ from textwrap import shorten
 from typing import Any
 
 from rich.console import Console
+from rich.padding import Padding
 from rich.table import Table
 from rich.text import Text
 
@@ -16,6 +17,7 @@ from fhiro2.catalogue import DERIVED_BY_CODE, MEASURED_BY_NAME, title_of
 from fhiro2.census import Census, Prospect, advice, notices
 from fhiro2.errors import Bucket
 from fhiro2.model import MICROSECONDS, WHY_TEXT, Flag, Why
+from fhiro2.write.flag import evidence_text, probability_text
 
 STROKES = {"info": "|", "warning": "||", "critical": "|||"}
 MOST_CODES = 40
@@ -84,28 +86,25 @@ def show_derived(console: Console, account: dict[str, Any]) -> None:
 
 
 def show_flags(console: Console, flags: Sequence[Flag]) -> None:
-    """Each flag as a sentence with its evidence and cautions."""
+    """Each flag as a sentence with its evidence and cautions, in the words of its narrative."""
     console.print(f"\n[bold]Flags for review[/bold]: {len(flags)} episodes")
     for flag in flags:
         state = "still standing" if flag.cleared is None else f"cleared {moment_text(flag.cleared)}"
         console.print(
             Text.assemble(
-                (f"{STROKES[flag.severity]:<3} ", "bold"),
-                (flag.title, "bold"),
-                f" ({flag.severity}), {flag.patient.rpartition('/')[2]}: {flag.message}",
+                (f"\n{STROKES[flag.severity]:<3} {flag.title}", "bold"),
+                f" ({flag.severity}), {flag.patient.rpartition('/')[2]}",
             )
         )
-        console.print(
-            f"      raised {moment_text(flag.raised)}, {state}; probability that the limit was truly crossed "
-            f"{flag.probability:.2f}",
-            highlight=False,
-        )
-        evidence = "; ".join(
-            f"{title_of(row.name)} {row.value:g} {row.unit} (u {row.uncertainty:.2g})".replace("mm[Hg]", "mmHg")
-            for row in flag.evidence
-        )
-        console.print(f"      evidence: {evidence}", highlight=False, markup=False)
-        console.print(f"      cautions: {'; '.join(flag.cautions)}", style="dim", highlight=False)
+        for line in (
+            f"{flag.message}.",
+            f"Raised {moment_text(flag.raised)}, {state}.",
+            f"Probability that the limit is truly crossed: {probability_text(flag.probability)}.",
+            *(f"Evidence: {evidence_text(found)}." for found in flag.evidence),
+        ):
+            console.print(Padding(Text(line), (0, 0, 0, 4)))
+        for caution in flag.cautions:
+            console.print(Padding(Text(f"Caution: {caution}.", style="dim"), (0, 0, 0, 4)))
 
 
 def show_census(console: Console, found: Census) -> None:

@@ -15,6 +15,7 @@ import pytest
 
 REQUIREMENT = "clinosim==0.6.5"
 DISEASES = ("sepsis", "copd_exacerbation")
+OPTIONS = ("-n", "8", "-s", "5", "--severity", "severe", "--format", "fhir-r4")
 ROOT = Path(__file__).parent.parent
 ENVIRONMENT = ROOT / ".venv-clinosim"
 CONSTRAINTS = ROOT / ".ci" / "simulator-constraints.txt"
@@ -28,8 +29,7 @@ def exports(tmp_path_factory: pytest.TempPathFactory) -> dict[str, Path]:
     folder = tmp_path_factory.mktemp("simulator")
     running = {
         disease: subprocess.Popen(
-            [program, "test-disease", disease, "-n", "8", "-s", "5", "--severity", "severe"]
-            + ["--format", "fhir-r4", "-o", str(folder / disease)],
+            [program, "test-disease", disease, *OPTIONS, "-o", str(folder / disease)],
             cwd=folder,
             env={name: value for name, value in os.environ.items() if name != "PYTHONPATH"},
             stdout=subprocess.PIPE,
@@ -43,6 +43,12 @@ def exports(tmp_path_factory: pytest.TempPathFactory) -> dict[str, Path]:
         if process.returncode:
             pytest.fail(f"{REQUIREMENT} ended with {process.returncode} for {disease}:\n{output[-2000:]}")
     return {disease: folder / disease / "fhir_r4" for disease in DISEASES}
+
+
+@pytest.fixture(scope="session", params=DISEASES)
+def export(request: pytest.FixtureRequest, exports: dict[str, Path]) -> Path:
+    """One export after the other."""
+    return exports[request.param]
 
 
 def _installed() -> str:

@@ -6,7 +6,13 @@ import numpy as np
 
 from fhiro2.account import Account
 from fhiro2.catalogue import DERIVED, title_of
-from fhiro2.model import WHY_TEXT, AnchorTable, Column, Outcome, Why
+from fhiro2.model import WHY_TEXT, Column, Outcome, Why
+
+_SAMPLES = {
+    "mixed venous sample near enough": {"svo2", "pvo2"},
+    "central venous sample near enough": {"scvo2", "pcvo2"},
+}
+"""Words for inputs that are missing together because their whole sample is."""
 
 
 def tally(account: Account, outcome: Outcome) -> None:
@@ -40,11 +46,11 @@ def missing_inputs(column: Column, mask: int) -> list[str]:
 
 
 def _words(column: Column, why: Why, mask: int) -> str:
-    if why is Why.INPUT_MISSING:
-        return "missing: " + ", ".join(title_of(name) for name in missing_inputs(column, mask))
-    return WHY_TEXT[why]
-
-
-def anchors(tables: dict[str, AnchorTable]) -> int:
-    """How many anchors a batch has."""
-    return sum(len(table.reading) for table in tables.values())
+    if why is not Why.INPUT_MISSING:
+        return WHY_TEXT[why]
+    names, words = missing_inputs(column, mask), []
+    for sample, inputs in _SAMPLES.items():
+        if inputs <= set(names):
+            names = [name for name in names if name not in inputs]
+            words.append(sample)
+    return "no " + ", no ".join([*(title_of(name) for name in names), *words])

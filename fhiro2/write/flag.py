@@ -10,7 +10,7 @@ from functools import cache
 
 import numpy as np
 
-from fhiro2.catalogue import decimals_of, title_of
+from fhiro2.catalogue import INPUT_BY_NAME, decimals_of, title_of
 from fhiro2.errors import StopError
 from fhiro2.fhir import systems
 from fhiro2.fhir.resources import Shape, date_times, quoted, shape, text_slot, time_slot
@@ -107,8 +107,8 @@ def _narrative(flag: Flag) -> str:
 
     return (
         f"<p>{_escaped(flag.message)}</p>"
-        f"<p>Probability that the limit is truly crossed: {_probability(flag.probability)}</p>"
-        f"<p>Evidence</p>{listed([_evidence(found) for found in flag.evidence])}"
+        f"<p>Probability that the limit is truly crossed: {probability_text(flag.probability)}</p>"
+        f"<p>Evidence</p>{listed([evidence_text(found) for found in flag.evidence])}"
         f"<p>Cautions</p>{listed(list(flag.cautions))}"
     )
 
@@ -117,19 +117,23 @@ def _escaped(text: str) -> str:
     return html.escape(inert(text))
 
 
-def _probability(probability: float) -> str:
+def probability_text(probability: float) -> str:
+    """A probability in words that claim no more than it holds."""
     if probability > 0.99:
         return "more than 0.99"
     return "less than 0.01" if probability < 0.01 else f"{probability:.2f}"
 
 
-def _evidence(found: Evidence) -> str:
-    decimals = decimals_of(found.name)
+def evidence_text(found: Evidence) -> str:
+    """One value as evidence: title, value with standard uncertainty and unit, age; measured fractions in percent."""
+    decimals, factor, unit = decimals_of(found.name), 1, f" {unit_text(found.unit)}"
+    if found.unit == "1":
+        percent = found.name in INPUT_BY_NAME
+        decimals, factor, unit = (max(decimals - 2, 0), 100, " %") if percent else (decimals, 1, "")
     if not math.isfinite(found.value):
         return f"{title_of(found.name)}: known only as a bound, {age_text(found.age)}"
-    doubt = f" ± {found.uncertainty:.{decimals + 1}f}" if math.isfinite(found.uncertainty) else ""
-    unit = "" if found.unit == "1" else f" {unit_text(found.unit)}"
-    return f"{title_of(found.name)}: {found.value:.{decimals}f}{doubt}{unit}, {age_text(found.age)}"
+    doubt = f" ± {factor * found.uncertainty:.{decimals + 1}f}" if math.isfinite(found.uncertainty) else ""
+    return f"{title_of(found.name)}: {factor * found.value:.{decimals}f}{doubt}{unit}, {age_text(found.age)}"
 
 
 @cache
