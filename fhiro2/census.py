@@ -19,7 +19,7 @@ from fhiro2.codes import LOINC, code_table
 from fhiro2.errors import Bucket, Reason
 from fhiro2.fhir.wire import Concept, Observation
 from fhiro2.judge import Pack
-from fhiro2.model import MINUTE, Column, Outcome, Readings, Specimen, Why
+from fhiro2.model import MINUTE, WHY_TEXT, Column, Outcome, Readings, Specimen, Why
 from fhiro2.read import Source
 from fhiro2.settings import Mapping, Settings
 from fhiro2.timeline import batches
@@ -197,10 +197,10 @@ def _hint(found: Census, name: str) -> str:
     quantity, title = INPUT_BY_NAME[name].quantity, title_of(name)
     readings = found.readings(quantity, _BLOOD.get(name))
     if readings:
-        apart = max(prospect.lacking[name, Why.OUTSIDE_WINDOW] for prospect in found.prospects.values())
+        most = [(why, max(one.lacking[name, why] for one in found.prospects.values())) for why in WHY_TEXT]
+        absent = ", ".join(f"{WHY_TEXT[why]} (up to {number} anchors)" for why, number in most if number)
         return (
-            f"{_capital(title)} was read {readings} times, but not for every patient and time: at up to {apart} "
-            "anchors there was none near enough. Send it more often, or see its window in the settings."
+            f"{_capital(title)} was read {readings} times; elsewhere {absent}: send it more often, or see its window."
         )
     if name == "sao2" and found.readings("spo2") and (LOINC, "2708-6") in found.codes:
         return (

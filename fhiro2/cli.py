@@ -24,7 +24,9 @@ if TYPE_CHECKING:
     from fhiro2.read.ndjson import NdjsonSource
     from fhiro2.settings import Mapping, Settings
 
-app = typer.Typer(no_args_is_help=True, add_completion=False, rich_markup_mode=None, help=__doc__)
+app = typer.Typer(
+    no_args_is_help=True, add_completion=False, rich_markup_mode=None, pretty_exceptions_enable=False, help=__doc__
+)
 rules_app = typer.Typer(no_args_is_help=True, help="Check the rules.")
 quarantine_app = typer.Typer(no_args_is_help=True, help="Look at what could not be used.")
 app.add_typer(rules_app, name="rules")
@@ -96,6 +98,7 @@ def census(
     settings: SettingsFile = None,
     mapping: MappingFile = None,
     rules: RulesFolder = None,
+    as_json: AsJson = False,
 ) -> None:
     """Say what a feed holds, which values it allows, and what is missing most."""
     from fhiro2.census import census as run
@@ -104,7 +107,10 @@ def census(
     given = _settings(settings), _mapping(mapping), _pack(rules)
     with _reading(inputs) as sources:
         found = run(sources, *given)
-    show_census(Console(), found)
+    if as_json:
+        _print_json(found.as_json())
+    else:
+        show_census(Console(), found)
 
 
 @app.command()

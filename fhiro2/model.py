@@ -78,12 +78,10 @@ class Caution(IntFlag):
     INTERVAL = auto()
     SIGN_FLIPPED = auto()
     SITE_DEFAULT_UNIT = auto()
-    HYPOXIC_GAS = auto()
     LATE_EVIDENCE = auto()
     INACTIVE_HAEMOGLOBIN_UNKNOWN = auto()
     PRESSURE_ASSUMED = auto()
     QUOTIENT_ASSUMED = auto()
-    TEMPERATURE_ASSUMED = auto()
     DPG_ASSUMED = auto()
     SHIFT_ASSUMED = auto()
     NOT_STEADY = auto()
@@ -117,12 +115,10 @@ CAUTION_TEXT: dict[Caution, str] = {
     Caution.INTERVAL: "an input is known only as a bound",
     Caution.SIGN_FLIPPED: "base deficit, read as negative base excess",
     Caution.SITE_DEFAULT_UNIT: "unit taken from a signed site default",
-    Caution.HYPOXIC_GAS: "inspired gas below room air",
     Caution.LATE_EVIDENCE: "an input became known more than 60 min after the anchor's own result",
     Caution.INACTIVE_HAEMOGLOBIN_UNKNOWN: "COHb and MetHb not measured",
     Caution.PRESSURE_ASSUMED: "barometric pressure assumed",
     Caution.QUOTIENT_ASSUMED: "respiratory quotient 0.8 assumed",
-    Caution.TEMPERATURE_ASSUMED: "37 C assumed",
     Caution.DPG_ASSUMED: "DPG 5 mmol/L assumed",
     Caution.SHIFT_ASSUMED: "curve shift by pH, pCO2, COHb or MetHb assumed standard where not measured",
     Caution.NOT_STEADY: "inspired oxygen changed less than 20 min before",

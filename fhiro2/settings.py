@@ -58,7 +58,6 @@ class Settings(_Frozen):
     base_urls: tuple[str, ...] = Field((), description="server addresses whose absolute references are our own")
     zone: str | None = Field(None, description="IANA zone for times without offset; without it they are quarantined")
     assume_respiratory_quotient: bool = Field(True, description="use 0.8 where none is measured, and say so")
-    assume_temperature: bool = Field(True, description="use 37 C where none is recorded, and say so")
     assume_dpg: bool = Field(True, description="use 5 mmol/L for the dissociation curve, and say so")
     windows: Windows = Windows()
 

@@ -172,7 +172,7 @@ def _show_codes(console: Console, found: Census, *, mapped: bool) -> None:
         table.add_row(*map(Text, cells))
     console.print(table)
     if len(codes) > MOST_CODES:
-        console.print(f"and {len(codes) - MOST_CODES} more: --json lists all", style="dim", highlight=False)
+        console.print(f"and {len(codes) - MOST_CODES} more, each of them rarer", style="dim", highlight=False)
 
 
 def _shares(counts: Counter[str]) -> str:

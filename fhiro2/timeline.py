@@ -16,8 +16,6 @@ from fhiro2.model import Fact, Names, Origins, Patient, Readings, Timelines, Tru
 
 _BUCKETS = tuple(Bucket)
 _REASONS = tuple(Reason)
-_BUCKET_NUMBER = {bucket: number for number, bucket in enumerate(_BUCKETS)}
-_REASON_NUMBER = {None: -1} | {reason: number for number, reason in enumerate(_REASONS)}
 _VERSION = np.dtype(
     [
         ("key", "i4"),
@@ -69,8 +67,8 @@ class Versions:
             updated,
             *text,
             digest,
-            _BUCKET_NUMBER[bucket],
-            _REASON_NUMBER[reason],
+            _BUCKETS.index(bucket),
+            -1 if reason is None else _REASONS.index(reason),
             origin,
             *place,
         )
@@ -104,11 +102,11 @@ class Resolution:
 
     def lose(self, row: int, bucket: Bucket, reason: Reason) -> None:
         """Take a version out of what stands."""
-        self.stands[row], self.bucket[row], self.reason[row] = False, _BUCKET_NUMBER[bucket], _REASON_NUMBER[reason]
+        self.stands[row], self.bucket[row], self.reason[row] = False, _BUCKETS.index(bucket), _REASONS.index(reason)
 
     def torn(self) -> NDArray[np.intp]:
         """The versions that were refused for having two contents."""
-        return np.flatnonzero(~self.stands & (self.bucket == _BUCKET_NUMBER[Bucket.QUARANTINED]))
+        return np.flatnonzero(~self.stands & (self.bucket == _BUCKETS.index(Bucket.QUARANTINED)))
 
     def counts(self) -> Iterator[tuple[Bucket, Reason | None, int]]:
         """How many versions ended in each bucket for each reason."""
@@ -241,7 +239,7 @@ def batches(
 
 
 def _timelines(readings: Readings, keys: list[str], names: Names, origins: Origins, roster: Roster) -> Timelines:
-    identities = np.array([origins.ids[origin] for origin in readings["origin"].tolist()], dtype=np.str_)
+    identities = np.array([origins.ids[origin] for origin in readings["origin"].tolist()], dtype=np.bytes_)
     _, tie = np.unique(identities, return_inverse=True)
     readings = readings[np.lexsort((readings["part"], tie, readings["effective"], readings["patient"]))]
     readings["uncertainty"] = default_uncertainty(readings["quantity"], _middle(readings))

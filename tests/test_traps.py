@@ -226,9 +226,7 @@ def test_t10_a_base_deficit_is_a_negative_excess(code: str) -> None:
         ("8837-7", 2000, "dyn.s/cm5/m2", 2000),
     ],
 )
-def test_t11_example_units_of_the_code_system_are_no_rule(
-    code: str, value: float, unit: str, expected: float
-) -> None:
+def test_t11_example_units_of_the_code_system_are_no_rule(code: str, value: float, unit: str, expected: float) -> None:
     assert valued(code, value, unit).value == expected
 
 
@@ -286,7 +284,9 @@ def test_t16_a_quantity_of_another_dimension_is_quarantined(code: str, value: fl
     assert refusal(observation("tested", code, value, unit)) is Reason.UNIT
 
 
-@pytest.mark.parametrize(("code", "value", "unit"), [("3150-0", 4, "L/min"), ("3151-8", 40, "%"), ("3151-8", 0.4, "1")])
+@pytest.mark.parametrize(
+    ("code", "value", "unit"), [("3150-0", 4, "L/min"), ("3151-8", 40, "%"), ("3151-8", 0.4, "1")]
+)
 def test_t17_swapped_codes_of_fraction_and_flow_are_quarantined(code: str, value: float, unit: str) -> None:
     assert refusal(observation("tested", code, value, unit)) is Reason.UNIT
 

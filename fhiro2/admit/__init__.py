@@ -4,7 +4,6 @@ status, comparators and time.
 
 from __future__ import annotations
 
-import hashlib
 import re
 from functools import cache
 from typing import Any, Final, NamedTuple
@@ -12,7 +11,8 @@ from typing import Any, Final, NamedTuple
 import msgspec
 
 from fhiro2.admit.coding import SATURATION_OR_PULSE, Coder
-from fhiro2.admit.context import Context, Interpreter, SpecimenEntry
+from fhiro2.admit.context import Context, Interpreter, SpecimenEntry, is_test_data
+from fhiro2.admit.envelope import ID, check_envelope
 from fhiro2.admit.moment import moment
 from fhiro2.admit.rows import Interner, Rows, pack_row
 from fhiro2.admit.value import Value, Valuer
@@ -20,15 +20,11 @@ from fhiro2.catalogue import QUANTITY
 from fhiro2.codes import Code
 from fhiro2.errors import Bucket, Reason, SkipError
 from fhiro2.fhir.systems import IDENTIFIERS, OBSERVATION_CATEGORY
-from fhiro2.fhir.wire import Observation, Reference, canonical
+from fhiro2.fhir.wire import Observation, Reference, content_hash
 from fhiro2.model import MINUTE, Caution, Kind, Specimen, SpecimenEvidence
 
 NAN: Final = float("nan")
 FUTURE: Final = 5 * MINUTE
-_ACCEPTED: Final = frozenset({"final", "amended", "corrected"})
-_WAITING: Final = frozenset({"preliminary", "registered"})
-_RETRACTED: Final = frozenset({"entered-in-error", "cancelled"})
-_ID: Final = re.compile(r"[A-Za-z0-9\-.]{1,64}", re.ASCII)
 _VENOUS: Final = frozenset({Specimen.VENOUS, Specimen.MIXED_VENOUS, Specimen.CENTRAL_VENOUS})
 _METHOD_CAUTION: Final = {
     "unknown": int(Caution.CARDIAC_OUTPUT_METHOD_UNKNOWN),
@@ -96,15 +92,15 @@ class Admitter:
         self._devices = Interner(names.devices, f"{source}|")
         self._samples = Interner(names.samples, f"{source}|")
 
-    def admit(self, found: Observation) -> Admission:
-        """Add the readings of ``found``, or say why it gives none."""
+    def admit(self, found: Observation, content: bytes) -> Admission:
+        """Add the readings of ``found``, which was read from ``content``, or say why it gives none."""
         try:
-            return self._admit(found)
+            return self._admit(found, content)
         except SkipError as error:
             return Admission(error.bucket, error.reason, error.detail)
 
-    def _admit(self, found: Observation) -> Admission:
-        _check_identity(found)
+    def _admit(self, found: Observation, content: bytes) -> Admission:
+        check_envelope(found)
         grouping = bool(found.component or found.hasMember)
         code = self._panel_code(found) if grouping else self._coder.code(found.code)
         if code is not None and code.use == "panel":
@@ -115,7 +111,7 @@ class Admitter:
                 self._note_panel(found)
                 return Admission(Bucket.OUT_OF_SCOPE, Reason.GROUPING_ONLY)
             raise SkipError(Reason.GROUPING_ONLY, "a panel without members")
-        setting = self._setting(found)
+        setting = self._setting(found, content)
         used = False
         if code is not None and (value is not None or not found.component):
             # no value and no stated reason is an absence as well: the measurement was asked for and gave nothing
@@ -166,7 +162,7 @@ class Admitter:
             raise out_of_scope
         return Admission(Bucket.USED, parts=tuple(refused))
 
-    def _setting(self, found: Observation) -> _Setting:
+    def _setting(self, found: Observation, content: bytes) -> _Setting:
         subject = self._subject(found)
         effective, cautions = self._effective(found)
         issued = None if found.issued is None else moment(found.issued, self._zone)[0]
@@ -177,9 +173,11 @@ class Admitter:
             known = effective if issued is None else issued
         if effective > known + FUTURE:
             raise SkipError(Reason.TIME, "later than it was known")
-        if issued is not None and issued < effective:
-            cautions |= int(Caution.TIME_ORDER)
+        if meta is not None and meta.security is not None and is_test_data(meta.security):
+            raise SkipError(Reason.EXCLUDED_PATIENT, "labelled as test data")
         specimen = None if found.specimen is None else self._specimen(found)
+        if (issued is not None and issued < effective) or (specimen is not None and specimen.received_too_early):
+            cautions |= int(Caution.TIME_ORDER)
         laboratory, vital_sign = found.specimen is not None, False
         for row in found.category:
             for coding in row.coding:
@@ -196,7 +194,7 @@ class Admitter:
             self._encounters.number(_plain(found.encounter, "Encounter/")),
             self._devices.number(device),
             self._samples.number(self._sample(found, specimen)),
-            self._rows.origin(found.id or "", version, "" if version else _content_hash(found)),
+            self._rows.origin(found.id or "", version, "" if version else content_hash(content).hex()),
             specimen.kind if specimen else Specimen.UNKNOWN,
             self._body_site(found, specimen),
             laboratory,
@@ -230,6 +228,7 @@ class Admitter:
                 cautions |= int(Caution.MIXED_VENOUS_UNPROVEN)
         if code.method:
             cautions |= _METHOD_CAUTION.get(code.method, 0)
+        self._rows.units.append(value.unit)
         self._rows.packed += pack_row(
             -1,
             setting.subject,
@@ -278,7 +277,7 @@ class Admitter:
 
     def _patient(self, text: str) -> str:
         kind, _, identity = self._local(text).partition("/")
-        if kind != "Patient" or not _ID.fullmatch(identity):
+        if kind != "Patient" or not ID.fullmatch(identity):
             raise SkipError(Reason.SUBJECT, "the subject is not a patient of this source")
         return f"Patient/{identity}"
 
@@ -298,6 +297,8 @@ class Admitter:
             identifiers = list(contained.get("identifier") or ())
         for row in identifiers:
             if isinstance(row, dict) and isinstance(row.get("value"), str):
+                if row["value"] in self._interpreter.excluded:
+                    raise SkipError(Reason.EXCLUDED_PATIENT, "on the list of excluded patients")
                 patient = self._context.patient_of(str(row.get("system", "")), row["value"])
                 if patient is not None:
                     return patient
@@ -344,34 +345,6 @@ class Admitter:
                 self._rows.panels[key] = min(panel, self._rows.panels.get(key, panel))
 
 
-def _check_identity(found: Observation) -> None:
-    if found.resourceType != "Observation":
-        raise SkipError(Reason.OTHER_TYPE, "not an Observation")
-    if found.id is None or not _ID.fullmatch(found.id):
-        raise SkipError(Reason.INVARIANT, "no valid id")
-    if found.identifier and is_own(found.identifier):
-        raise SkipError(Reason.OWN_OUTPUT, "written by this program")
-    if found.modifierExtension is not None:
-        raise SkipError(Reason.MODIFIER, "an unknown modifier extension")
-    if found.implicitRules is not None:
-        raise SkipError(Reason.VERSION, "implicit rules that are not known")
-    if found.status not in _ACCEPTED:
-        if found.status in _WAITING:
-            raise SkipError(Reason.PRELIMINARY, "not final yet")
-        if found.status in _RETRACTED:
-            raise SkipError(Reason.RETRACTED, "withdrawn by its source")
-        raise SkipError(Reason.STATUS, "a status that is not known or says unknown")
-
-
-def is_own(identifiers: Any) -> bool:
-    """Whether one of a resource's identifiers is of this program's own systems."""
-    if isinstance(identifiers, (list, tuple)):
-        for row in identifiers:
-            if type(row) is dict and str(row.get("system")).startswith(IDENTIFIERS):
-                return True
-    return False
-
-
 @cache
 def _blood(code: Specimen, specimen: Specimen, site: Specimen) -> tuple[Specimen, int] | None:
     """The kind of blood that all evidence agrees on, with the evidence; None where it contradicts itself."""
@@ -393,7 +366,7 @@ def _clashing(admitted: list[tuple[int, Code, Value]]) -> set[tuple[str, Specime
     clashing = set()
     for _, code, value in admitted:
         first = seen.setdefault((code.quantity, code.specimen), value)
-        if first is not value and repr(first) != repr(value):
+        if first is not value and repr(first.numbers()) != repr(value.numbers()):
             clashing.add((code.quantity, code.specimen))
     return clashing
 
@@ -405,7 +378,3 @@ def _contained(found: Observation, reference: str) -> dict[str, Any] | None:
 def _plain(reference: Reference | None, kind: str) -> str:
     text = reference.reference if reference and reference.reference else ""
     return text if text.startswith(kind) else ""
-
-
-def _content_hash(found: Observation) -> str:
-    return hashlib.sha256(canonical(found)).hexdigest()

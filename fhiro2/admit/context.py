@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from dataclasses import dataclass, field
+from datetime import UTC, datetime
 from typing import Any, TypeVar
 
 import msgspec
@@ -10,7 +11,7 @@ import msgspec
 from fhiro2.admit.moment import moment
 from fhiro2.errors import Reason, SkipError
 from fhiro2.fhir.wire import Concept, Period, Reference
-from fhiro2.model import Fact, Specimen
+from fhiro2.model import DAY, MICROSECONDS, Fact, Specimen
 from fhiro2.settings import Mapping
 
 FIRST_MOMENT = -(2**61)
@@ -27,6 +28,7 @@ _SPECIMEN_CODES = {
     "PLAS": Specimen.PLASMA,
     "SER": Specimen.PLASMA,
 }
+_TEST_DATA = ("http://terminology.hl7.org/CodeSystem/v3-ActReason", "HTEST")
 _DONE = {"completed": True, "in-progress": True, "stopped": True, "on-hold": True, "not-done": False}
 
 
@@ -42,12 +44,13 @@ class PatientEntry:
 
 @dataclass(frozen=True)
 class SpecimenEntry:
-    """A Specimen: the kinds of blood that its type and its body site state, and its accession."""
+    """A Specimen: the kinds of blood that its type and its body site state, its accession, a doubt of its times."""
 
     kind: Specimen
     site: Specimen
     accession: str
     subject: str
+    received_too_early: bool
 
 
 @dataclass(frozen=True)
@@ -71,8 +74,13 @@ class _Link(msgspec.Struct, frozen=True):
     type: str = ""
 
 
+class _Meta(msgspec.Struct, frozen=True):
+    security: Any = None
+
+
 class _Patient(msgspec.Struct, frozen=True):
     id: str
+    meta: _Meta = _Meta()
     birthDate: str | None = None  # noqa: N815
     identifier: tuple[_Identifier, ...] = ()
     link: tuple[_Link, ...] = ()
@@ -80,6 +88,8 @@ class _Patient(msgspec.Struct, frozen=True):
 
 class _Collection(msgspec.Struct, frozen=True):
     bodySite: Concept = Concept()  # noqa: N815
+    collectedDateTime: str | None = None  # noqa: N815
+    collectedPeriod: Period = Period()  # noqa: N815
 
 
 class _Specimen(msgspec.Struct, frozen=True):
@@ -87,6 +97,7 @@ class _Specimen(msgspec.Struct, frozen=True):
     type: Concept = Concept()
     accessionIdentifier: _Identifier = _Identifier()  # noqa: N815
     collection: _Collection = _Collection()
+    receivedTime: str | None = None  # noqa: N815
     subject: Reference = Reference()
 
 
@@ -118,6 +129,10 @@ Read = TypeVar("Read")
 
 
 def _read(resource: dict[str, Any], form: type[Read]) -> Read:
+    if resource.get("modifierExtension") is not None:
+        raise SkipError(Reason.MODIFIER, "an unknown modifier extension")
+    if resource.get("implicitRules") is not None:
+        raise SkipError(Reason.VERSION, "implicit rules that are not known")
     try:
         return msgspec.convert(resource, form)
     except msgspec.ValidationError as error:
@@ -131,7 +146,7 @@ class Interpreter:
         self._zone = zone
         self._facts = {(row.system, row.code): row.fact for row in mapping.facts}
         self._specimens = {(row.system, row.code): Specimen[row.specimen.upper()] for row in mapping.specimens}
-        self._excluded = frozenset(mapping.excluded_patients)
+        self.excluded = frozenset(mapping.excluded_patients)
 
     def entry(self, resource: dict[str, Any]) -> Entry:
         """What ``resource`` states; raises SkipError where it states nothing that is used."""
@@ -158,7 +173,18 @@ class Interpreter:
             self.kind(found.collection.bodySite),
             f"{accession.system}|{accession.value}" if accession.value else "",
             found.subject.reference or "",
+            self._received_too_early(found),
         )
+
+    def _received_too_early(self, found: _Specimen) -> bool:
+        """Whether it came in before it was taken, as far as both times can be placed."""
+        collected = found.collection.collectedDateTime or found.collection.collectedPeriod.start
+        if collected is None or found.receivedTime is None:
+            return False
+        try:
+            return moment(found.receivedTime, self._zone)[0] < moment(collected, self._zone)[0]
+        except SkipError:
+            return False
 
     def kind(self, concept: Concept) -> Specimen:
         """The kind of blood that a specimen type or body site states, else UNKNOWN."""
@@ -172,8 +198,10 @@ class Interpreter:
 
     def _patient(self, found: _Patient) -> PatientEntry:
         identifiers = tuple((row.system, row.value) for row in found.identifier)
-        if {found.id, *(value for _, value in identifiers)} & self._excluded:
+        if {found.id, *(value for _, value in identifiers)} & self.excluded:
             raise SkipError(Reason.EXCLUDED_PATIENT, "on the list of excluded patients")
+        if is_test_data(found.meta.security):
+            raise SkipError(Reason.EXCLUDED_PATIENT, "labelled as test data")
         return PatientEntry(
             _birth(found.birthDate),
             identifiers,
@@ -211,6 +239,13 @@ class Interpreter:
     def _stated(self, *concepts: Concept) -> list[str]:
         pairs = {(coding.system or "", coding.code or "") for concept in concepts for coding in concept.coding}
         return sorted({self._facts[pair] for pair in pairs if pair in self._facts})
+
+
+def is_test_data(labels: Any) -> bool:
+    """Whether a resource's security labels say HTEST, test health data (HL7 v3-ActReason)."""
+    return isinstance(labels, list) and any(
+        isinstance(row, dict) and (row.get("system"), row.get("code")) == _TEST_DATA for row in labels
+    )
 
 
 def _facts(stated: list[str], subject: Reference, answer: bool, start: int, end: int) -> tuple[FactEntry, ...]:
@@ -275,8 +310,10 @@ def _followed(patient: str, replaced: dict[str, set[str]]) -> str:
     return seen[-1]
 
 
-def _birth(text: Any) -> int | None:
+def _birth(text: str | None) -> int | None:
+    """Noon of the day of birth in microseconds; None where the day is not known."""
     try:
-        return moment(f"{text}T12:00:00Z", None)[0] if isinstance(text, str) else None
-    except SkipError:
+        born = datetime.strptime(text or "", "%Y-%m-%d").replace(tzinfo=UTC)
+    except ValueError:
         return None
+    return round(born.timestamp()) * MICROSECONDS + DAY // 2

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import struct
+from array import array
 from dataclasses import dataclass, field
 
 import numpy as np
@@ -36,12 +37,17 @@ class Interner:
 
 @dataclass
 class Rows:
-    """All readings admitted so far, over any number of sources."""
+    """All readings admitted so far, over any number of sources.
+
+    ``units`` holds for each reading the number of its ``source|code|unit`` in ``unit_names``, or -1.
+    """
 
     origins: Origins = field(default_factory=Origins)
     names: Names = field(default_factory=Names)
     panels: dict[str, str] = field(default_factory=dict)
     packed: bytearray = field(default_factory=bytearray)
+    units: array[int] = field(default_factory=lambda: array("i"))
+    unit_names: list[str] = field(default_factory=list)
 
     def origin(self, resource: str, version: str, content_hash: str) -> int:
         """A new origin: one resource version that gives readings."""

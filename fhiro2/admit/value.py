@@ -8,6 +8,7 @@ from typing import Final
 
 import msgspec
 
+from fhiro2.admit.rows import Interner
 from fhiro2.catalogue import MEASURED_BY_NAME
 from fhiro2.codes import ANSWERS, Code
 from fhiro2.errors import Reason, SkipError
@@ -28,25 +29,39 @@ _NOT_MEASURED: Final = re.compile(
 
 
 class Value(msgspec.Struct, frozen=True, gc=False):
-    """A value in canonical units: ``low`` < ``high`` where only a bound is known; all NaN for a stated absence."""
+    """A value in canonical units: ``low`` < ``high`` where only a bound is known; all NaN for a stated absence.
+
+    ``unit`` is the number of the unit in which it was sent, -1 for none.
+    """
 
     value: float = NAN
     low: float = NAN
     high: float = NAN
     answer: int = -1
     cautions: int = 0
+    unit: int = -1
+
+    def numbers(self) -> tuple[float, float, float, int]:
+        """What was said, however it was written."""
+        return self.value, self.low, self.high, self.answer
 
 
 ABSENT: Final = Value()
 
 
 class Valuer:
-    """Reads values by the shipped units, a site's answers and its signed default units."""
+    """Reads values by the shipped units, a site's answers and its signed default units.
 
-    def __init__(self, answers: Map[tuple[str, str], tuple[str, int]], default_units: Map[str, str]) -> None:
+    ``units`` numbers each code with the unit it comes in, as ``code|unit``; units of one size are one.
+    """
+
+    def __init__(
+        self, answers: Map[tuple[str, str], tuple[str, int]], default_units: Map[str, str], units: Interner
+    ) -> None:
         self._answers = dict(ANSWERS) | dict(answers)
         self._default_units = default_units
-        self._scales: dict[tuple[str, str | None, str | None, str | None], tuple[Scale, int] | SkipError] = {}
+        self._units = units
+        self._scales: dict[tuple[str, str | None, str | None, str | None], tuple[Scale, int, int] | SkipError] = {}
 
     def value(self, part: Observation | Component, code: Code) -> Value | None:
         """The value of ``part``; None where it has none and says nothing; raises SkipError with the reason."""
@@ -64,7 +79,7 @@ class Valuer:
     def _number(self, quantity: Quantity, code: Code) -> Value:
         if quantity.value is None:
             return ABSENT
-        scale, cautions = self._scale(quantity, code)
+        scale, unit, cautions = self._scale(quantity, code)
         number = quantity.value * scale.factor + scale.offset
         if code.negate:
             number, cautions = 0.0 - number, cautions | int(Caution.SIGN_FLIPPED)
@@ -72,10 +87,10 @@ class Valuer:
         if code.quantity == "hb" and quantity.code == "mmol/L" and quantity.value < _TETRAMER_LIMIT:
             cautions |= int(Caution.SEVERE_ANAEMIA_OR_TETRAMER)
         if quantity.comparator is None:
-            return Value(number, number, number, -1, cautions)
-        return _bound(number, quantity.comparator, code, cautions)
+            return Value(number, number, number, -1, cautions, unit)
+        return _bound(number, quantity.comparator, code, cautions, unit)
 
-    def _scale(self, quantity: Quantity, code: Code) -> tuple[Scale, int]:
+    def _scale(self, quantity: Quantity, code: Code) -> tuple[Scale, int, int]:
         key = (code.loinc, quantity.system, quantity.code, quantity.unit)
         found = self._scales.get(key)
         if found is None:
@@ -88,7 +103,8 @@ class Valuer:
             raise found
         return found
 
-    def _find_scale(self, quantity: Quantity, code: Code) -> tuple[Scale, int]:
+    def _find_scale(self, quantity: Quantity, code: Code) -> tuple[Scale, int, int]:
+        """The conversion to the canonical unit, the number of the unit, and the cautions that reading it earns."""
         default = self._default_units.get(code.loinc, "")
         try:
             unit, legacy = read_unit(
@@ -101,7 +117,10 @@ class Valuer:
         caution = int(Caution.UNIT_SPELLING) if legacy else 0
         if default and not quantity.unit and not quantity.code and not code.unit_if_absent:
             caution |= int(Caution.SITE_DEFAULT_UNIT)
-        return substance_scale(code.quantity, unit, MEASURED_BY_NAME[code.quantity].unit), caution
+        canonical = MEASURED_BY_NAME[code.quantity].unit
+        found = substance_scale(code.quantity, unit, canonical)
+        same = (one for one in code.units if substance_scale(code.quantity, one, canonical) == found)
+        return found, self._units.number(f"{code.loinc}|{next(same, unit)}"), caution
 
     def _other(self, part: Observation | Component, code: Code) -> Value | None:
         concept, text = part.valueCodeableConcept, part.valueString
@@ -152,12 +171,12 @@ def _within(number: float, code: Code, cautions: int) -> tuple[float, int]:
     return number, cautions
 
 
-def _bound(number: float, comparator: str, code: Code, cautions: int) -> Value:
+def _bound(number: float, comparator: str, code: Code, cautions: int, unit: int) -> Value:
     if comparator not in _COMPARATORS:
         raise SkipError(Reason.COMPARATOR, "a comparator that R4 does not have")
     if code.negate:
         comparator = comparator.translate(str.maketrans("<>", "><"))
     cautions |= int(Caution.INTERVAL)
     if comparator.startswith("<"):
-        return Value(NAN, 0.0 if code.low >= 0 else -INFINITE, number, -1, cautions)
-    return Value(NAN, number, 1.0 if code.high <= 1.03 else INFINITE, -1, cautions)
+        return Value(NAN, 0.0 if code.low >= 0 else -INFINITE, number, -1, cautions, unit)
+    return Value(NAN, number, 1.0 if code.high <= 1.03 else INFINITE, -1, cautions, unit)

@@ -7,8 +7,9 @@ from collections.abc import Iterator
 from fhiro2.account import Account
 from fhiro2.admit import Admission
 from fhiro2.bulk.quarantine import Quarantine
-from fhiro2.bulk.unit import Unit, content_hash, units
+from fhiro2.bulk.unit import Unit, units
 from fhiro2.errors import Bucket, Reason, SkipError
+from fhiro2.fhir.wire import content_hash
 from fhiro2.model import Integers
 from fhiro2.read import Source
 from fhiro2.timeline import NEVER_UPDATED, Resolution, Versions, resolve

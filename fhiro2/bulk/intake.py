@@ -11,15 +11,17 @@ import msgspec
 import numpy as np
 
 from fhiro2.account import Account
-from fhiro2.admit import Admission, Admitter, is_own
+from fhiro2.admit import Admission, Admitter
 from fhiro2.admit.coding import Coder, Table, site_table
 from fhiro2.admit.context import CONTEXT_TYPES, Context, Entry, Interpreter
+from fhiro2.admit.envelope import is_own
 from fhiro2.admit.moment import moment
-from fhiro2.admit.rows import Rows
+from fhiro2.admit.rows import Interner, Rows
 from fhiro2.admit.value import Valuer
 from fhiro2.bulk.book import Book, standing_origins
 from fhiro2.bulk.quarantine import Quarantine
 from fhiro2.bulk.unit import OBSERVATION, Unit, observations, units
+from fhiro2.bulk.unit_switch import unit_switches
 from fhiro2.codes import CONSCIOUSNESS, LOINC, code_table
 from fhiro2.errors import Bucket, Reason, SkipError, StopError
 from fhiro2.fhir.wire import Door, Observation
@@ -83,7 +85,7 @@ def _take_in(
             context,
             interpreter,
             coder,
-            _valuer(source.name, mapping),
+            _valuer(source.name, mapping, found.rows),
             zone,
             settings.base_urls,
         )
@@ -91,18 +93,22 @@ def _take_in(
         _describe(source.name, context, found.roster)
         received += first.versions.count + second.versions.count
     found.account.check(received)
-    readings = found.rows.readings()
+    readings, unit = found.rows.readings(), np.frombuffer(found.rows.units, dtype=np.int32)
     standing = np.zeros(len(found.rows.origins.ids), dtype=bool)
     for origins in stands:
         standing[origins] = True
-    found.readings = readings if standing.all() else readings[standing[readings["origin"]]]
+    if not standing.all():
+        stand = standing[readings["origin"]]
+        readings, unit = readings[stand], unit[stand]
+    found.readings = readings
+    found.account.notices += unit_switches(readings, unit, found.rows.unit_names)
     panel_samples(found.readings, found.rows.names, found.rows.origins, found.rows.panels)
     return found
 
 
 def _context(book: Book, interpreter: Interpreter, found: Intake) -> Context:
     """First pass: everything that is not an Observation."""
-    context = Context()
+    context = Context(excluded={f"Patient/{name}" for name in interpreter.excluded})
     stated: dict[int, tuple[str, Entry]] = {}
     excluded: dict[int, str] = {}
     for raw in book.source.read(leave_out=OBSERVATION):
@@ -151,7 +157,7 @@ def _observations(book: Book, admitter: Admitter, found: Intake, watch: Watch | 
                 continue
             if resource.id is None:
                 resource = msgspec.structs.replace(resource, id=unit.named_id() or None)
-            admission = admit(resource)
+            admission = admit(resource, unit.content)
             if watch is not None:
                 watch(resource, admission)
             meta = resource.meta
@@ -224,10 +230,11 @@ def _describe(source: str, context: Context, roster: Roster) -> None:
         roster.facts[key] = tuple(sorted(facts, key=lambda one: (one.fact, one.start, one.end, one.answer)))
 
 
-def _valuer(source: str, mapping: Mapping) -> Valuer:
+def _valuer(source: str, mapping: Mapping, rows: Rows) -> Valuer:
     return Valuer(
         {(row.system, row.code): (row.quantity, CONSCIOUSNESS.index(row.answer)) for row in mapping.answers},
         {row.loinc: row.unit for row in mapping.default_units if row.source == source},
+        Interner(rows.unit_names, f"{source}|"),
     )
 
 

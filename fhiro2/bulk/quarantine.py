@@ -10,6 +10,8 @@ from typing import Any
 from fhiro2.errors import Reason
 from fhiro2.read import Source
 
+_MOST_DETAIL = 200  # characters; what a feed wrote may be quoted in it
+
 
 class Quarantine:
     """Writes ``quarantine.ndjson``: one line a quarantined resource or component that no later version replaced."""
@@ -39,7 +41,7 @@ class Quarantine:
             "line": place[1],
             "resource": resource,
             "reason": str(reason),
-            "detail": detail,
+            "detail": detail if len(detail) <= _MOST_DETAIL else f"{detail[:_MOST_DETAIL]}…",
             "raw": content.decode("utf-8", "backslashreplace"),
         }
         if place[2] >= 0:

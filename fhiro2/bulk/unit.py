@@ -2,14 +2,13 @@
 
 from __future__ import annotations
 
-import hashlib
 from collections.abc import Iterator
 from typing import NamedTuple
 
 import msgspec
 
 from fhiro2.errors import Reason, SkipError
-from fhiro2.fhir.wire import Door, canonical, read_strictly
+from fhiro2.fhir.wire import Door
 from fhiro2.read import Raw
 
 OBSERVATION = b'{"resourceType":"Observation"'
@@ -50,7 +49,7 @@ class Unit(NamedTuple):
 
 class _Entry(msgspec.Struct):
     fullUrl: str | None = None  # noqa: N815
-    resource: msgspec.Raw | None = None
+    resource: msgspec.Raw = msgspec.Raw()
 
 
 class _Bundle(msgspec.Struct):
@@ -82,8 +81,9 @@ def units(raw: Raw) -> Iterator[Unit]:
         yield whole
         return
     for number, entry in enumerate(bundle.entry):
-        if entry.resource is not None:
-            yield Unit(bytes(entry.resource), (raw.file, raw.line, number), entry.fullUrl or "")
+        content = bytes(entry.resource)
+        if content:
+            yield Unit(content, (raw.file, raw.line, number), entry.fullUrl or "")
 
 
 def observations(raw: Raw) -> Iterator[Unit]:
@@ -95,11 +95,3 @@ def observations(raw: Raw) -> Iterator[Unit]:
                 yield unit
         except (*_UNREADABLE, SkipError):
             continue
-
-
-def content_hash(content: bytes) -> bytes:
-    """SHA-256 of the canonical content of a resource, of its bytes where it cannot be read."""
-    try:
-        return hashlib.sha256(canonical(read_strictly(content))).digest()
-    except SkipError:
-        return hashlib.sha256(content).digest()

@@ -9,6 +9,7 @@ refuses duplicate keys, NaN, numbers out of range, lone surrogates and deep nest
 
 from __future__ import annotations
 
+import hashlib
 import json
 import math
 from typing import Any, NoReturn
@@ -214,8 +215,16 @@ def read_strictly(line: bytes) -> dict[str, Any]:
 
 
 def canonical(resource: Any) -> bytes:
-    """The canonical JSON of a resource: sorted keys, no spaces, numbers as numbers; equal content, equal bytes."""
-    return msgspec.json.encode(resource, order="deterministic")
+    """The canonical JSON of a resource as read: sorted keys, no spaces; equal content, equal bytes."""
+    return msgspec.json.encode(resource, order="sorted")
+
+
+def content_hash(line: bytes) -> bytes:
+    """SHA-256 of the canonical JSON of a resource; of its bytes where it cannot be read."""
+    try:
+        return hashlib.sha256(canonical(read_strictly(line))).digest()
+    except SkipError:
+        return hashlib.sha256(line).digest()
 
 
 def _convert(resource: dict[str, Any]) -> Observation:

@@ -76,7 +76,7 @@ class _Pairing:
             choice, torn = in_sample(
                 self.keyed, sampled, quantity, self.usable, self.same_sample, measured_only=measured_only
             )
-            column = self._column(table, choice, quantity)
+            column = self._column(table, choice, quantity, _BLOODS[kind])
             column.why[torn] = Why.TWO_CANDIDATES
             table.columns[name] = column
             if measured_only:
@@ -179,7 +179,9 @@ class _Pairing:
         result: Truths = choice.found() & (key[np.maximum(place, 0)] >= 0) & recent
         return result
 
-    def _column(self, table: AnchorTable, choice: Choice, quantity: str) -> Column:
+    def _column(
+        self, table: AnchorTable, choice: Choice, quantity: str, blood: Specimen | None = None
+    ) -> Column:
         """The chosen readings as a column, or why there is none."""
         readings, found = self.readings, choice.found()
         row = np.maximum(choice.row, 0)
@@ -198,13 +200,15 @@ class _Pairing:
             taken("high"),
             taken("uncertainty"),
             cautions,
-            np.where(found, np.int64(Why.KNOWN), self._absence(table, quantity)),
+            np.where(found, np.int64(Why.KNOWN), self._absence(table, quantity, blood)),
             choice.row,
             choice.runner_up,
         )
 
-    def _absence(self, table: AnchorTable, quantity: str) -> Integers:
+    def _absence(self, table: AnchorTable, quantity: str, blood: Specimen | None) -> Integers:
         of_quantity = self.readings["quantity"] == QUANTITY[quantity]
+        if blood is not None:
+            of_quantity &= np.isin(self.readings["specimen"], (blood, Specimen.UNKNOWN))
         absent = np.flatnonzero(of_quantity & ~self.usable)
         stated = latest(self.keyed, absent, self._at(table), self.same_sample).found()
         ever = np.isin(table.patient, self.readings["patient"][of_quantity & self.usable])

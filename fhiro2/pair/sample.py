@@ -1,7 +1,7 @@
 """One blood sample: which readings were measured in it.
 
 The same sample is the same panel, accession or specimen; else the same time (within a minute) with no contradicting
-blood or device, where a reading that another sample owns is not taken, and two candidate samples give neither.
+blood or device, where a reading that another sample owns is not taken, and two candidates of one kind give neither.
 """
 
 from __future__ import annotations
@@ -101,11 +101,16 @@ def _timed(keyed: Keys, sampled: Sampled, stream: Integers, same_sample: int) ->
     device, other_device = readings["device"][sampled.lead[found.anchor]], readings["device"][found.row]
     contradicting = (device >= 0) & (other_device >= 0) & (device != other_device)
     found = found.where(~elsewhere & ~contradicting)
-    return nearest(keyed, found, count, readings["kind"].astype(np.int64)), _torn(readings, sampled, found)
+    kind = readings["kind"].astype(np.int64)
+    best = np.full(count, max(Kind))
+    np.minimum.at(best, found.anchor, kind[found.row])
+    return nearest(keyed, found, count, kind), _torn(
+        readings, sampled, found.where(kind[found.row] == best[found.anchor])
+    )
 
 
 def _torn(readings: Readings, sampled: Sampled, found: Candidates) -> Truths:
-    """Where an anchor's candidates disagree, or where one candidate lies near two anchors of different samples."""
+    """Where an anchor's best candidates disagree, or one candidate lies near two anchors of different samples."""
     torn = np.zeros(len(sampled.lead), dtype=bool)
     if not len(found.row):
         return torn

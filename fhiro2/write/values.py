@@ -274,13 +274,12 @@ def _input(outcome: Outcome, anchors: _Anchors, name: str, entities: Entities) -
     there = source >= 0
     origin = np.where(there, rows["origin"], -1)
     ages = anchors.table.effective[anchors.span] - rows["effective"]
-    words = {age: f"{name}, {age_text(age)}" for age in np.unique(ages[there]).tolist()}
+    words = {age: quoted(f"{name}, {age_text(age)}") for age in np.unique(ages[there]).tolist()}
     text = [words.get(age, "") for age in ages.tolist()]
     ids = timelines.origins.ids
     for place in np.flatnonzero(there & (runner_up >= 0)).tolist():
         next_nearest = ids[timelines.readings["origin"][runner_up[place]]]
-        text[place] += f"; next nearest Observation/{next_nearest}"
-    text = [quoted(words) for words in text]
+        text[place] += quoted(f"; next nearest Observation/{next_nearest}")
     filled, references = source_shape().filled, entities.references
     entry = [
         filled((references[place], words)) if place >= 0 else ""
