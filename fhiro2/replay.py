@@ -12,7 +12,7 @@ from typing import Any
 from fhiro2 import __version__
 from fhiro2.account import Account
 from fhiro2.assess import assess
-from fhiro2.bulk.intake import take_in
+from fhiro2.bulk.intake import few_collections, take_in
 from fhiro2.bulk.quarantine import Quarantine
 from fhiro2.bulk.tally import tally
 from fhiro2.judge import Pack
@@ -45,7 +45,7 @@ def replay(
     run = Run(started.isoformat(timespec="milliseconds").replace("+00:00", "Z"), pack.hash, __version__)
     quarantine = Quarantine(out / "quarantine.ndjson")
     try:
-        with NdjsonSink(out, run) as sink:
+        with few_collections(), NdjsonSink(out, run) as sink:
             intake = take_in(sources, settings, mapping, quarantine)
             account, names, origins = intake.account, intake.rows.names, intake.rows.origins
             for timelines in batches(intake.readings, names, origins, intake.roster):

@@ -55,9 +55,11 @@ class Versions:
         bucket: Bucket,
         reason: Reason | None,
         origin: int,
-        place: tuple[int, int, int],
+        file: int,
+        line: int,
+        entry: int,
     ) -> int:
-        """Add a version of the resource ``key`` ('' for one without identity), found at ``place``; return its row."""
+        """Add a version of the resource ``key`` ('' for one without identity) and its place; return its row."""
         keys = self._keys
         text = self._texts.get(version)
         if text is None:
@@ -70,7 +72,9 @@ class Versions:
             _BUCKETS.index(bucket),
             -1 if reason is None else _REASONS.index(reason),
             origin,
-            *place,
+            file,
+            line,
+            entry,
         )
         self.count += 1
         return self.count - 1
@@ -110,9 +114,11 @@ class Resolution:
 
     def counts(self) -> Iterator[tuple[Bucket, Reason | None, int]]:
         """How many versions ended in each bucket for each reason."""
-        pairs, numbers = np.unique(np.stack([self.bucket, self.reason]), axis=1, return_counts=True)
-        for (bucket, reason), number in zip(pairs.T.tolist(), numbers.tolist(), strict=True):
-            yield _BUCKETS[bucket], None if reason < 0 else _REASONS[reason], number
+        kinds = self.bucket.astype(np.int64) * (len(_REASONS) + 1) + self.reason + 1
+        for kind, number in enumerate(np.bincount(kinds).tolist()):
+            if number:
+                bucket, reason = divmod(kind, len(_REASONS) + 1)
+                yield _BUCKETS[bucket], _REASONS[reason - 1] if reason else None, number
 
 
 def resolve(versions: Versions, content: Callable[[list[int]], Mapping[int, bytes]]) -> Resolution:

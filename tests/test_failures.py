@@ -390,13 +390,13 @@ def test_c21_a_subject_of_known_form_is_resolved() -> None:
     known = patient("p7", identifier=[{"system": MRN, "value": "700"}])
     identifier = {"system": MRN, "value": "700"}
     contained = {"resourceType": "Patient", "id": "inside", "identifier": [identifier]}
-    for subject, more in (
-        ({"identifier": identifier}, {}),
-        ({"reference": "#inside"}, {"contained": [contained]}),
-        ({"reference": "Patient/p7"}, {}),
-        ({"reference": "Patient/p7/_history/3"}, {}),
+    for subject in (
+        {"identifier": identifier},
+        {"reference": "#inside"},
+        {"reference": "Patient/p7"},
+        {"reference": "Patient/p7/_history/3"},
     ):
-        assert reading(known, observation(subject=subject, **more)).patient == "feed|Patient/p7"
+        assert reading(known, observation(subject=subject, contained=[contained])).patient == "feed|Patient/p7"
 
 
 @pytest.mark.parametrize("subject", ["Group/g1", "Device/d1", "Location/l1"])
@@ -469,12 +469,12 @@ def test_c25_a_declared_zone_places_local_time_with_a_caution() -> None:
 def test_c26_the_night_the_clocks_change() -> None:
     """EU Directive 2000/84/EC: 25 October 2026, 03:00 summer time is 02:00 again; 29 March, 02:00 becomes 03:00."""
     berlin = Settings(zone="Europe/Berlin")
-    autumn = {"meta": {"versionId": "1", "lastUpdated": "2026-10-26T00:00:00Z"}}
+    autumn: dict[str, Any] = {"meta": {"versionId": "1", "lastUpdated": "2026-10-26T00:00:00Z"}}
     twice = observation(effectiveDateTime="2026-10-25T02:30:00", **autumn)
     assert reading(twice, settings=berlin).cautions & Caution.TIME_AMBIGUOUS
     plain = observation(effectiveDateTime="2026-10-25T02:30:00+01:00", **autumn)
     assert not reading(plain, settings=berlin).cautions
-    spring = {"meta": {"versionId": "1", "lastUpdated": "2026-03-30T00:00:00Z"}}
+    spring: dict[str, Any] = {"meta": {"versionId": "1", "lastUpdated": "2026-03-30T00:00:00Z"}}
     never = observation(effectiveDateTime="2026-03-29T02:30:00", **spring)
     assert fate(never, settings=berlin) == (Bucket.QUARANTINED, Reason.TIME)
 

@@ -169,8 +169,8 @@ def sampled(name: str, **more: Any) -> list[Resource]:
     return [observation("gas", **more), observation("pco2", "2019-8", 40, seconds=5 * MINUTE, **more)]
 
 
-SPECIMEN = {"specimen": {"reference": "Specimen/s"}}
-ACCESSION = {"accessionIdentifier": {"system": "urn:example:lab", "value": "7"}}
+SPECIMEN: Resource = {"specimen": {"reference": "Specimen/s"}}
+ACCESSION: Resource = {"accessionIdentifier": {"system": "urn:example:lab", "value": "7"}}
 
 
 def test_one_specimen_is_one_sample() -> None:
@@ -245,7 +245,7 @@ def test_one_value_between_two_samples_goes_to_neither() -> None:
 
 @pytest.mark.parametrize(("device", "found"), [("Device/a", True), ("Device/b", False), (None, True)])
 def test_another_analyser_contradicts(device: str | None, found: bool) -> None:
-    stated = {"device": None if device is None else {"reference": device}}
+    stated: Resource = {"device": None if device is None else {"reference": device}}
     made = pair(observation("gas", device={"reference": "Device/a"}), observation("pco2", "2019-8", 40, **stated))
     assert (made.why("paco2") is Why.KNOWN) is found
 

@@ -4,8 +4,6 @@ status, comparators and time.
 
 from __future__ import annotations
 
-import re
-from functools import cache
 from typing import Any, Final, NamedTuple
 
 import msgspec
@@ -19,7 +17,7 @@ from fhiro2.admit.value import Value, Valuer
 from fhiro2.catalogue import QUANTITY
 from fhiro2.codes import Code
 from fhiro2.errors import Bucket, Reason, SkipError
-from fhiro2.fhir.systems import IDENTIFIERS, OBSERVATION_CATEGORY
+from fhiro2.fhir.systems import OBSERVATION_CATEGORY
 from fhiro2.fhir.wire import Observation, Reference, content_hash
 from fhiro2.model import MINUTE, Caution, Kind, Specimen, SpecimenEvidence
 
@@ -220,7 +218,7 @@ class Admitter:
             cautions |= int(Caution.METHOD_NOT_STATED)
         blood, evidence = Specimen.NONE, 0
         if code.specimen is not Specimen.NONE and quantity != "spo2":
-            agreed = _blood(code.specimen, setting.blood, setting.site)
+            agreed = _BLOOD[code.specimen][setting.blood][setting.site]
             if agreed is None:
                 raise SkipError(Reason.SPECIMEN, "code, specimen and body site name different blood")
             blood, evidence = agreed
@@ -345,8 +343,7 @@ class Admitter:
                 self._rows.panels[key] = min(panel, self._rows.panels.get(key, panel))
 
 
-@cache
-def _blood(code: Specimen, specimen: Specimen, site: Specimen) -> tuple[Specimen, int] | None:
+def _agreed(code: Specimen, specimen: Specimen, site: Specimen) -> tuple[Specimen, int] | None:
     """The kind of blood that all evidence agrees on, with the evidence; None where it contradicts itself."""
     blood, evidence = code, SpecimenEvidence.NOTHING if code is Specimen.UNKNOWN else SpecimenEvidence.CODE
     for stated, kind in ((specimen, SpecimenEvidence.SPECIMEN), (site, SpecimenEvidence.BODY_SITE)):
@@ -359,6 +356,10 @@ def _blood(code: Specimen, specimen: Specimen, site: Specimen) -> tuple[Specimen
         elif Specimen.PLASMA not in (blood, stated):
             return None
     return blood, int(evidence)
+
+
+_BLOOD: Final = [[[_agreed(code, one, site) for site in Specimen] for one in Specimen] for code in Specimen]
+"""``_agreed`` for every combination, by the numbers of the specimens."""
 
 
 def _clashing(admitted: list[tuple[int, Code, Value]]) -> set[tuple[str, Specimen]]:

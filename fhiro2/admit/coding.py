@@ -13,6 +13,7 @@ SATURATION_OR_PULSE = "2708-6"
 _LOOSER_VENOUS = {Specimen.MIXED_VENOUS, Specimen.CENTRAL_VENOUS}
 
 Table = Map[tuple[str, str], Code]
+Key = tuple[tuple[str | None, str | None], ...]
 
 
 class Coder:
@@ -20,13 +21,17 @@ class Coder:
 
     def __init__(self, table: Table) -> None:
         self._table = table
-        self._known: dict[tuple[tuple[str | None, str | None], ...], Code | SkipError] = {}
+        self._known: dict[Key, Code | SkipError] = {}
 
     def code(self, concept: Concept | None) -> Code:
         """The code meant by ``concept``; raises SkipError (unmapped, refused or in conflict)."""
         if concept is None:
             raise SkipError(Reason.INVARIANT, "no code")
-        key = tuple([(coding.system, coding.code) for coding in concept.coding])
+        codings = concept.coding
+        if len(codings) == 1:
+            key: Key = ((codings[0].system, codings[0].code),)
+        else:
+            key = tuple([(coding.system, coding.code) for coding in codings])
         found = self._known.get(key)
         if found is None:
             try:
@@ -38,7 +43,7 @@ class Coder:
             raise found
         return found
 
-    def _agree(self, key: tuple[tuple[str | None, str | None], ...]) -> Code:
+    def _agree(self, key: Key) -> Code:
         found = [self._table[pair] for pair in key if pair in self._table]  # type: ignore[index]
         if not found:
             raise SkipError(Reason.UNMAPPED_CODE, "no coding of a known system and code")

@@ -7,11 +7,11 @@ from collections.abc import Iterator
 from fhiro2.account import Account
 from fhiro2.admit import Admission
 from fhiro2.bulk.quarantine import Quarantine
-from fhiro2.bulk.unit import Unit, units
+from fhiro2.bulk.unit import units
 from fhiro2.errors import Bucket, Reason, SkipError
 from fhiro2.fhir.wire import content_hash
 from fhiro2.model import Integers
-from fhiro2.read import Source
+from fhiro2.read import Raw, Source
 from fhiro2.timeline import NEVER_UPDATED, Resolution, Versions, resolve
 
 
@@ -24,23 +24,23 @@ class Book:
         self._quarantine = quarantine
         self._parts: dict[int, tuple[Reason, ...]] = {}
 
-    def add(self, unit: Unit, key: str, version: str, updated: int, admission: Admission, origin: int = -1) -> int:
+    def add(self, unit: Raw, key: str, version: str, updated: int, admission: Admission, origin: int = -1) -> int:
         """Enter one version; what was refused, whole or in part, is kept for another try."""
         bucket, reason, detail, parts = admission
-        row = self.versions.add(key, version, updated, hash(unit.content), bucket, reason, origin, unit.place)
+        row = self.versions.add(
+            key, version, updated, hash(unit.content), bucket, reason, origin, unit.file, unit.line, unit.entry
+        )
         if parts:
             self._parts[row] = tuple(error.reason for _, error in parts)
         if self._quarantine is not None and (parts or bucket is Bucket.QUARANTINED):
             if bucket is Bucket.QUARANTINED:
-                self._quarantine.keep(row, self.source, unit.place, key, reason, detail, unit.content)
+                self._quarantine.keep(row, self.source, unit, key, reason, detail)
             for number, error in parts:
-                self._quarantine.keep(
-                    row, self.source, unit.place, key, error.reason, error.detail, unit.content, number
-                )
+                self._quarantine.keep(row, self.source, unit, key, error.reason, error.detail, number)
         return row
 
     def refuse(
-        self, unit: Unit, error: SkipError, key: str = "", version: str = "", updated: int = NEVER_UPDATED
+        self, unit: Raw, error: SkipError, key: str = "", version: str = "", updated: int = NEVER_UPDATED
     ) -> int:
         """Enter a version that gave nothing, for the reason in ``error``."""
         return self.add(unit, key, version, updated, Admission(error.bucket, error.reason, error.detail))
@@ -57,14 +57,14 @@ class Book:
             self._quarantine.settle(lambda row: bool(resolution.stands[row]))
             for row, unit in self._again(resolution.torn().tolist()):
                 detail = "this version came with two contents"
-                self._quarantine.keep(row, self.source, unit.place, "", Reason.VERSION, detail, unit.content)
+                self._quarantine.keep(row, self.source, unit, "", Reason.VERSION, detail)
             self._quarantine.settle(lambda row: True)
         return resolution
 
     def _hashes(self, rows: list[int]) -> dict[int, bytes]:
         return {row: content_hash(unit.content) for row, unit in self._again(rows)}
 
-    def _again(self, rows: list[int]) -> Iterator[tuple[int, Unit]]:
+    def _again(self, rows: list[int]) -> Iterator[tuple[int, Raw]]:
         """Some rows' units, read again from their places."""
         if not rows:
             return
@@ -74,8 +74,9 @@ class Book:
         for raw in self.source.read():
             if (raw.file, raw.line) in touched:
                 for unit in units(raw):
-                    if unit.place in wanted:
-                        yield wanted[unit.place], unit
+                    row = wanted.get((unit.file, unit.line, unit.entry))
+                    if row is not None:
+                        yield row, unit
 
 
 def standing_origins(resolution: Resolution) -> Integers:

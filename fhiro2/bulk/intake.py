@@ -3,7 +3,8 @@
 from __future__ import annotations
 
 import gc
-from collections.abc import Callable, Sequence
+from collections.abc import Callable, Iterator, Sequence
+from contextlib import contextmanager
 from dataclasses import dataclass, field
 from typing import Any
 
@@ -20,18 +21,18 @@ from fhiro2.admit.rows import Interner, Rows
 from fhiro2.admit.value import Valuer
 from fhiro2.bulk.book import Book, standing_origins
 from fhiro2.bulk.quarantine import Quarantine
-from fhiro2.bulk.unit import OBSERVATION, Unit, observations, units
+from fhiro2.bulk.unit import OBSERVATION, named_id, observations, refusal, resource, units
 from fhiro2.bulk.unit_switch import unit_switches
 from fhiro2.codes import CONSCIOUSNESS, LOINC, code_table
 from fhiro2.errors import Bucket, Reason, SkipError, StopError
 from fhiro2.fhir.wire import Door, Observation
 from fhiro2.model import Fact, Integers, Readings
-from fhiro2.read import Source
+from fhiro2.read import Raw, Source
 from fhiro2.settings import Mapping, Settings
 from fhiro2.timeline import NEVER_UPDATED, Roster, panel_samples
 
 _COLLECT_EVERY = 200_000
-"""New objects between two garbage collections while reading: rows make no cycles, looking for them costs a tenth."""
+"""New objects between two garbage collections; at the usual 700 they take a tenth of the time."""
 
 Watch = Callable[[Observation, Admission], None]
 
@@ -58,10 +59,17 @@ def take_in(
 
     ``watch`` sees each Observation that could be read, with what became of it.
     """
+    with few_collections():
+        return _take_in(sources, settings, mapping, quarantine, watch)
+
+
+@contextmanager
+def few_collections() -> Iterator[None]:
+    """Let the garbage collector look for cycles rarely: bulk work makes many objects and hardly a cycle."""
     thresholds = gc.get_threshold()
     gc.set_threshold(_COLLECT_EVERY, *thresholds[1:])
     try:
-        return _take_in(sources, settings, mapping, quarantine, watch)
+        yield
     finally:
         gc.set_threshold(*thresholds)
 
@@ -116,17 +124,17 @@ def _context(book: Book, interpreter: Interpreter, found: Intake) -> Context:
             continue
         for unit in units(raw):
             try:
-                resource = unit.resource(found.doors[0])
+                content = resource(unit, found.doors[0])
             except SkipError as error:
                 book.refuse(unit, error)
                 continue
-            key, version, updated = _label(resource, unit)
+            key, version, updated = _label(content, unit)
             if unit.full_url:
                 context.note_alias(unit.full_url, key)
-            if resource.get("resourceType") == "Observation":
+            if content.get("resourceType") == "Observation":
                 continue
             try:
-                entry = _entry(resource, interpreter)
+                entry = _entry(content, interpreter)
             except SkipError as error:
                 row = book.refuse(unit, error, key, version, updated)
                 if error.reason is Reason.EXCLUDED_PATIENT:
@@ -148,22 +156,22 @@ def _observations(book: Book, admitter: Admitter, found: Intake, watch: Watch | 
         if raw.fault is Reason.SIZE:
             continue
         plain = raw.content.startswith(OBSERVATION)
-        for unit in (Unit(raw.content, (raw.file, raw.line, -1), "", raw.fault),) if plain else observations(raw):
+        for unit in (raw,) if plain else observations(raw):
             origin = len(given)
             try:
-                resource = read(unit.content)
+                observation = read(unit.content)
             except SkipError as error:
-                book.refuse(unit, unit.refusal(error))
+                book.refuse(unit, refusal(unit, error))
                 continue
-            if resource.id is None:
-                resource = msgspec.structs.replace(resource, id=unit.named_id() or None)
-            admission = admit(resource, unit.content)
+            if observation.id is None:
+                observation = msgspec.structs.replace(observation, id=named_id(unit) or None)
+            admission = admit(observation, unit.content)
             if watch is not None:
-                watch(resource, admission)
-            meta = resource.meta
+                watch(observation, admission)
+            meta = observation.meta
             book.add(
                 unit,
-                resource.id or "",
+                observation.id or "",
                 meta.versionId or "" if meta is not None else "",
                 NEVER_UPDATED if meta is None or meta.lastUpdated is None else _updated(meta.lastUpdated),
                 admission,
@@ -193,10 +201,10 @@ def _own_provenance(resource: dict[str, Any]) -> bool:
     )
 
 
-def _label(resource: dict[str, Any], unit: Unit) -> tuple[str, str, int]:
+def _label(resource: dict[str, Any], unit: Raw) -> tuple[str, str, int]:
     """Key ('' without identity), versionId and lastUpdated of a resource; an id may come from its full URL."""
-    if resource.get("id") is None and unit.named_id():
-        resource["id"] = unit.named_id()
+    if resource.get("id") is None and named_id(unit):
+        resource["id"] = named_id(unit)
     kind, identity, meta = resource.get("resourceType"), resource.get("id"), resource.get("meta")
     if not isinstance(kind, str) or not isinstance(identity, str):
         return "", "", NEVER_UPDATED

@@ -8,7 +8,7 @@ from pathlib import Path
 from typing import Any
 
 from fhiro2.errors import Reason
-from fhiro2.read import Source
+from fhiro2.read import Raw, Source
 
 _MOST_DETAIL = 200  # characters; what a feed wrote may be quoted in it
 
@@ -27,25 +27,24 @@ class Quarantine:
         self,
         row: int,
         source: Source,
-        place: tuple[int, int, int],
+        unit: Raw,
         resource: str,
         reason: Reason | None,
         detail: str,
-        content: bytes,
         part: int | None = None,
     ) -> None:
         """Keep one refused resource (or its component ``part``) until it is known whether its version stands."""
         line: dict[str, Any] = {
             "source": source.name,
-            "file": _file_name(source, place[0]),
-            "line": place[1],
+            "file": _file_name(source, unit.file),
+            "line": unit.line,
             "resource": resource,
             "reason": str(reason),
             "detail": detail if len(detail) <= _MOST_DETAIL else f"{detail[:_MOST_DETAIL]}…",
-            "raw": content.decode("utf-8", "backslashreplace"),
+            "raw": unit.content.decode("utf-8", "backslashreplace"),
         }
-        if place[2] >= 0:
-            line["entry"] = place[2]
+        if unit.entry >= 0:
+            line["entry"] = unit.entry
         if part is not None:
             line["component"] = part
         self._stream.write(f"{row}\t{json.dumps(line, ensure_ascii=True)}\n")

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Iterator
-from typing import NamedTuple
+from typing import Any
 
 import msgspec
 
@@ -19,32 +19,26 @@ _BUNDLE_WITHIN = 4096
 _URN = "urn:uuid:"
 
 
-class Unit(NamedTuple):
-    """One resource: its bytes, its place (file, line, entry of a Bundle or -1), its full URL, its fault."""
+def named_id(unit: Raw) -> str:
+    """The id that a resource without one takes from its full URL; '' where that is no UUID."""
+    return unit.full_url.removeprefix(_URN) if unit.full_url.startswith(_URN) else ""
 
-    content: bytes
-    place: tuple[int, int, int]
-    full_url: str = ""
-    fault: Reason | None = None
 
-    def named_id(self) -> str:
-        """The id that a resource without one takes from its full URL; '' where that is no UUID."""
-        return self.full_url.removeprefix(_URN) if self.full_url.startswith(_URN) else ""
+def resource(unit: Raw, door: Door) -> dict[str, Any]:
+    """The resource as a dictionary; raises SkipError."""
+    if unit.fault is Reason.SIZE:
+        raise SkipError(Reason.SIZE, "larger than what is read")
+    try:
+        return door.resource(unit.content)
+    except SkipError as error:
+        raise refusal(unit, error) from None
 
-    def resource(self, door: Door) -> dict[str, object]:
-        """The resource as a dictionary; raises SkipError."""
-        if self.fault is Reason.SIZE:
-            raise SkipError(Reason.SIZE, "larger than what is read")
-        try:
-            return door.resource(self.content)
-        except SkipError as error:
-            raise self.refusal(error) from None
 
-    def refusal(self, error: SkipError) -> SkipError:
-        """The error with its true cause: what breaks off at the end of a file was cut, not badly written."""
-        if self.fault is Reason.TRUNCATED and error.reason is Reason.JSON:
-            return SkipError(Reason.TRUNCATED, "the file ends in the middle of this line")
-        return error
+def refusal(unit: Raw, error: SkipError) -> SkipError:
+    """The error with its true cause: what breaks off at the end of a file was cut, not badly written."""
+    if unit.fault is Reason.TRUNCATED and error.reason is Reason.JSON:
+        return SkipError(Reason.TRUNCATED, "the file ends in the middle of this line")
+    return error
 
 
 class _Entry(msgspec.Struct):
@@ -66,32 +60,34 @@ _KIND_OF = msgspec.json.Decoder(_Kind)
 _UNREADABLE = (msgspec.MsgspecError, UnicodeDecodeError, RecursionError)
 
 
-def units(raw: Raw) -> Iterator[Unit]:
+def units(raw: Raw) -> Iterator[Raw]:
     """The resources in one raw line: itself, or the entries of a Bundle."""
-    whole = Unit(raw.content, (raw.file, raw.line, -1), "", raw.fault)
-    if raw.fault is Reason.SIZE or _BUNDLE not in raw.content[:_BUNDLE_WITHIN]:
-        yield whole
-        return
-    try:
-        bundle = _BUNDLE_OF.decode(raw.content)
-    except _UNREADABLE:
-        yield whole
-        return
-    if bundle.resourceType != "Bundle":
-        yield whole
+    bundle = _bundle(raw)
+    if bundle is None:
+        yield raw
         return
     for number, entry in enumerate(bundle.entry):
         content = bytes(entry.resource)
         if content:
-            yield Unit(content, (raw.file, raw.line, number), entry.fullUrl or "")
+            yield Raw(content, raw.file, raw.line, None, number, entry.fullUrl or "")
 
 
-def observations(raw: Raw) -> Iterator[Unit]:
+def _bundle(raw: Raw) -> _Bundle | None:
+    if raw.fault is Reason.SIZE or _BUNDLE not in raw.content[:_BUNDLE_WITHIN]:
+        return None
+    try:
+        bundle = _BUNDLE_OF.decode(raw.content)
+    except _UNREADABLE:
+        return None
+    return bundle if bundle.resourceType == "Bundle" else None
+
+
+def observations(raw: Raw) -> Iterator[Raw]:
     """The units of a raw line that are Observations and could be read as a resource at all."""
     for unit in units(raw):
         try:
             if unit.fault is not Reason.SIZE and _KIND_OF.decode(unit.content).resourceType == "Observation":
-                unit.resource(Door())
+                resource(unit, Door())
                 yield unit
         except (*_UNREADABLE, SkipError):
             continue

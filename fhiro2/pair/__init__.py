@@ -179,9 +179,7 @@ class _Pairing:
         result: Truths = choice.found() & (key[np.maximum(place, 0)] >= 0) & recent
         return result
 
-    def _column(
-        self, table: AnchorTable, choice: Choice, quantity: str, blood: Specimen | None = None
-    ) -> Column:
+    def _column(self, table: AnchorTable, choice: Choice, quantity: str, blood: Specimen | None = None) -> Column:
         """The chosen readings as a column, or why there is none."""
         readings, found = self.readings, choice.found()
         row = np.maximum(choice.row, 0)
@@ -280,9 +278,10 @@ def _cut(table: AnchorTable, timelines: Timelines) -> AnchorTable:
 
 def _state_facts(table: AnchorTable, timelines: Timelines) -> None:
     """For each context fact: 1 stated, 0 stated not to be, -1 unknown, at every anchor."""
+    spoken_of = [(patient, facts) for patient, facts in enumerate(timelines.facts) if facts]
     for name in _FACTS:
         state = np.full(len(table.reading), -1, dtype=np.int8)
-        for patient, facts in enumerate(timelines.facts):
+        for patient, facts in spoken_of:
             mine = table.patient == patient
             for fact in sorted((one for one in facts if one.fact == name), key=lambda one: (one.answer, one.start)):
                 begun = mine & (table.effective >= fact.start)

@@ -3,18 +3,26 @@
 from __future__ import annotations
 
 from collections.abc import Iterator
-from typing import NamedTuple, Protocol
+from typing import Protocol
+
+import msgspec
 
 from fhiro2.errors import Reason
 
 
-class Raw(NamedTuple):
-    """One raw resource: its bytes without the line end, number of its file, its line, and what is wrong with it."""
+class Raw(msgspec.Struct, frozen=True, gc=False):
+    """One raw resource: its bytes without the line end, where it was found, and what is wrong with it.
+
+    ``file`` is the number of its file, ``line`` counts from 1, ``entry`` is its place in a Bundle (-1: not in one) and
+    ``full_url`` its name there.
+    """
 
     content: bytes
     file: int
     line: int
     fault: Reason | None = None
+    entry: int = -1
+    full_url: str = ""
 
 
 class Source(Protocol):
