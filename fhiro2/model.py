@@ -151,6 +151,7 @@ READING = np.dtype(
         ("specimen", "i1"),
         ("evidence", "u1"),
         ("kind", "i1"),
+        ("oximetry", "?"),
         ("corrected", "?"),
         ("cautions", "u8"),
         ("encounter", "i4"),

@@ -65,6 +65,8 @@ def show_account(console: Console, account: dict[str, Any]) -> None:
     if account["parts_quarantined"]:
         table.add_row(str(account["parts_quarantined"]), "components", "refused inside resources that were used")
     console.print(table)
+    for notice in account["notices"]:
+        console.print(Text(f"Notice: {notice}."))
 
 
 def show_derived(console: Console, account: dict[str, Any]) -> None:

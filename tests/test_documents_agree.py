@@ -87,7 +87,8 @@ def test_every_formula_has_outside_evidence() -> None:
     """Each derived value's formula has a check value that was published or is common practice, or a definition."""
     formula = {
         "oxygen-content": "o2_content", "content-difference": "o2_content", "oxygen-delivery": "do2",
-        "oxygen-delivery-index": "index_by_surface", "reverse-fick": "vo2_fick", "reverse-fick-index": "index_by_surface",
+        "oxygen-delivery-index": "index_by_surface", "reverse-fick": "vo2_fick",
+        "reverse-fick-index": "index_by_surface",
         "extraction-ratio": "o2er", "alveolar-air": "pao2_alveolar_full",
         "alveolar-arterial-gradient": "aa_gradient", "pf-ratio": "pf_ratio", "sf-ratio": "sf_ratio",
         "dissociation-tanh-1990": "p50_siggaard_andersen_1990",

@@ -309,6 +309,19 @@ def test_c15_fractions_that_do_not_add_up_give_no_content(oxygenated: float, agr
     assert found.why("oxygen-content-arterial") is (Why.KNOWN if agrees else Why.SUSPECT_SAMPLE)
 
 
+@pytest.mark.parametrize(("oxygenated", "agrees"), [(97, True), (98, False)])
+def test_c15_fractions_beyond_the_whole_give_no_content(oxygenated: float, agrees: bool) -> None:
+    """Without sO2: FO2Hb + COHb + MetHb can be no more than 100 %, and 2 points of rounding (failure catalogue)."""
+    found = pair(
+        observation("po2"),
+        observation("hb", "718-7", 15, "g/dL"),
+        observation("fo2hb", "2714-4", oxygenated, "%"),
+        observation("cohb", "2030-5", 3, "%"),
+        observation("methb", "2615-3", 2, "%"),
+    )
+    assert found.why("oxygen-content-arterial") is (Why.KNOWN if agrees else Why.SUSPECT_SAMPLE)
+
+
 @pytest.mark.parametrize(("value", "unit"), [(150, "g/L"), (15, "g/dL"), (9.309, "mmol/L")])
 def test_c16_haemoglobin_is_read_by_its_unit(value: float, unit: str) -> None:
     """0.6206 mmol/L for 1 g/dL (Jordan and Kratz; iqtig.org): 15 g/dL are 9.309 mmol/L."""

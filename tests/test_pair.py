@@ -280,6 +280,13 @@ def test_a_measured_haemoglobin_comes_before_a_nearer_estimate() -> None:
     assert alone.cautions("hb") == Caution.EARLIER_HAEMOGLOBIN | Caution.CALCULATED_HAEMOGLOBIN
 
 
+def test_a_haemoglobin_by_oximetry_comes_before_a_nearer_one_of_the_laboratory() -> None:
+    oximetry = observation("oximetry", "14775-1", 10, "g/dL", seconds=-2 * HOUR)
+    laboratory = observation("laboratory", "718-7", 10.4, "g/dL", seconds=-HOUR)
+    made = beside(oximetry, laboratory)
+    assert (made.sources("hb"), made.runners_up("hb")) == (["oximetry"], ["laboratory"])
+
+
 @pytest.mark.parametrize("named", [SPECIMEN, {}], ids=["by name", "by time"])
 def test_of_one_sample_the_measured_value_is_taken_and_the_estimate_kept(named: dict[str, Any]) -> None:
     made = pair(
@@ -340,6 +347,7 @@ def test_analyser_laboratory_and_chart_are_one_anchor_in_both_units() -> None:
     ]
     made = pair(*filed("analyser", 0, po2=99.8), *laboratory, *filed("chart", 420, po2=99.8))
     assert made.anchors() == ["analyser-po2"]
+    assert made.runners_up("pao2") == ["laboratory-po2"]
 
 
 @pytest.mark.parametrize(

@@ -241,6 +241,7 @@ class Admitter:
             blood,
             evidence,
             Kind.ESTIMATED if code.quantity == "hb" and code.method == "from-haematocrit" else kind,
+            code.method == "co-oximetry",
             code.corrected,
             cautions,
             setting.encounter,

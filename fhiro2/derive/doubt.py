@@ -38,8 +38,10 @@ def mark_fractions(table: AnchorTable, functional: str, fractional: str) -> None
     expected = so2.value * (1 - cohb.value - methb.value)
     known = so2.known() & fo2hb.known() & cohb.known() & methb.known()
     apart = known & (np.abs(fo2hb.value - expected) > _FRACTIONS_SUM)
+    together = fo2hb.value + cohb.value + methb.value
+    beyond = fo2hb.known() & cohb.known() & methb.known() & (together > 1 + _FRACTIONS_SUM)
     for column in (so2, fo2hb):
-        _mark(column, apart, Caution.FRACTIONS_DISAGREE)
+        _mark(column, apart | beyond, Caution.FRACTIONS_DISAGREE)
 
 
 def _mark(column: Column, where: Truths, caution: Caution) -> None:

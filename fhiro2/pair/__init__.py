@@ -20,7 +20,7 @@ from fhiro2.model import (
     pick,
 )
 from fhiro2.pair.sample import in_sample, leads
-from fhiro2.pair.search import NOBODY, Choice, Keys, keys, latest, nearest, within
+from fhiro2.pair.search import NOBODY, Choice, Keys, keys, latest, nearest, trust, within
 from fhiro2.settings import Settings, Windows
 
 ARTERIAL, MIXED, CENTRAL = "arterial", "mixed-venous", "central-venous"
@@ -83,6 +83,8 @@ class _Pairing:
                 calculated, _ = in_sample(self.keyed, sampled, quantity, self.usable, self.same_sample)
                 column.why[~choice.found() & calculated.found()] = Why.NOT_COMPUTED_FROM_CALCULATED
         repeated = _repeats(table, _micro(self.windows.repeated_sample))
+        lead = table.columns[_SAMPLE_INPUTS[kind][0]]
+        lead.runner_up[:-1][repeated[1:]] = table.reading[1:][repeated[1:]]
         _mark_discordant(table, self.same_sample)
         table = _kept(table, ~repeated)
         self._earlier_haemoglobin(table)
@@ -135,7 +137,7 @@ class _Pairing:
         own, at = table.columns["hb"], self._at(table)
         keep = own.known() | (own.why == Why.TWO_CANDIDATES)
         earlier = within(self.keyed, self._stream("hb"), at, _micro(self.windows.haemoglobin), 0)
-        choice = nearest(self.keyed, earlier, len(at), self.readings["kind"].astype(np.int64))
+        choice = nearest(self.keyed, earlier, len(at), trust(self.readings))
         column = self._column(table, choice, "hb")
         column.cautions[choice.found()] |= np.uint64(Caution.EARLIER_HAEMOGLOBIN)
         table.columns["hb"] = choose(keep, own, column)

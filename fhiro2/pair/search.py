@@ -15,6 +15,12 @@ _TIME_BITS = 51
 NOBODY = -1
 
 
+def trust(readings: Readings) -> Integers:
+    """The rank of every reading beside others of its quantity: co-oximetry, measured, set, calculated, estimated."""
+    result: Integers = 2 * readings["kind"].astype(np.int64) + ~readings["oximetry"]
+    return result
+
+
 @dataclass(frozen=True)
 class Keys:
     """The key of every reading: patient in the upper bits, microseconds since the batch's first in the lower."""
