@@ -22,7 +22,6 @@ _VERSION = np.dtype(
         ("updated", "i8"),
         ("number", "i8"),
         ("text", "i4"),
-        ("digest", "i8"),
         ("bucket", "i1"),
         ("reason", "i1"),
         ("origin", "i4"),
@@ -31,7 +30,8 @@ _VERSION = np.dtype(
         ("entry", "i4"),
     ]
 )
-_ROW = struct.Struct("<iqqiqbbiiqi")
+_ROW = struct.Struct("<iqqibbiiqi")
+_pack = _ROW.pack
 _NO_KEY = -1
 NEVER_UPDATED = -(2**62)
 MOST_PATIENTS = 2048  # a batch's time keys fit 63 bits: 11 bits of patient, 51 bits of microseconds
@@ -41,17 +41,20 @@ MOST_PATIENTS = 2048  # a batch's time keys fit 63 bits: 11 bits of patient, 51 
 class Versions:
     """One row a received resource version, in order of arrival: what it is, where it ended, what it gave."""
 
-    count: int = 0
     _keys: dict[str, int] = field(default_factory=dict)
     _texts: dict[str, tuple[int, int]] = field(default_factory=dict)
     _packed: bytearray = field(default_factory=bytearray)
+
+    @property
+    def count(self) -> int:
+        """How many versions were received."""
+        return len(self._packed) // _ROW.size
 
     def add(
         self,
         key: str,
         version: str,
         updated: int,
-        digest: int,
         bucket: Bucket,
         reason: Reason | None,
         origin: int,
@@ -64,11 +67,11 @@ class Versions:
         text = self._texts.get(version)
         if text is None:
             text = self._texts[version] = _version_numbers(version, len(self._texts))
-        self._packed += _ROW.pack(
+        self._packed += _pack(
             keys.setdefault(key, len(keys)) if key else _NO_KEY,
             updated,
-            *text,
-            digest,
+            text[0],
+            text[1],
             _BUCKETS.index(bucket),
             -1 if reason is None else _REASONS.index(reason),
             origin,
@@ -76,8 +79,7 @@ class Versions:
             line,
             entry,
         )
-        self.count += 1
-        return self.count - 1
+        return len(self._packed) // _ROW.size - 1
 
     def rows(self) -> NDArray[np.void]:
         """All rows as one structured array."""
@@ -154,7 +156,7 @@ def _groups(rows: NDArray[np.void]) -> list[list[int]]:
 
 
 def _alike(rows: NDArray[np.void], group: list[int]) -> list[int]:
-    """The rows of a group whose content must be compared: one version twice, or one rank twice, not the same bytes."""
+    """The rows of a group whose content must be compared: one version twice, or one rank twice."""
     found = []
     for labels in (
         [int(rows["text"][row]) if rows["text"][row] >= 0 else -2 - row for row in group],
@@ -164,7 +166,7 @@ def _alike(rows: NDArray[np.void], group: list[int]) -> list[int]:
         for label, row in zip(labels, group, strict=True):
             sharing.setdefault(label, []).append(row)
         for members in sharing.values():
-            if len({int(rows["digest"][row]) for row in members}) > 1:
+            if len(members) > 1:
                 found += members
     return found
 
@@ -173,7 +175,7 @@ def _resolve_one(
     rows: NDArray[np.void], group: list[int], resolution: Resolution, hashes: Mapping[int, bytes]
 ) -> None:
     def content(row: int) -> bytes:
-        return hashes.get(row) or int(rows["digest"][row]).to_bytes(8, "big", signed=True)
+        return hashes.get(row, b"")
 
     contents: dict[int, set[bytes]] = {}
     for row in group:

@@ -27,8 +27,8 @@ Row = tuple[str, str, int, str]  # key, versionId, lastUpdated, content
 def standing(rows: list[Row]) -> list[Row]:
     """The rows whose version stands, sorted."""
     versions = Versions()
-    for place, (key, version, updated, content) in enumerate(rows):
-        versions.add(key, version, updated, hash(content), Bucket.USED, None, place, 0, place, -1)
+    for place, (key, version, updated, _) in enumerate(rows):
+        versions.add(key, version, updated, Bucket.USED, None, place, 0, place, -1)
     found = resolve(versions, lambda chosen: {row: hashlib.sha256(rows[row][3].encode()).digest() for row in chosen})
     return sorted(row for row, stands in zip(rows, found.stands.tolist(), strict=True) if stands)
 
@@ -68,8 +68,8 @@ def test_one_version_with_two_contents_does_not_stand_but_another_may() -> None:
 def test_one_version_sent_again_stands_once() -> None:
     versions = Versions()
     for place in range(3):
-        versions.add("a", "1", 10, hash("x"), Bucket.USED, None, place, 0, place, -1)
-    found = resolve(versions, lambda rows: pytest.fail("equal bytes need no second look"))
+        versions.add("a", "1", 10, Bucket.USED, None, place, 0, place, -1)
+    found = resolve(versions, lambda rows: dict.fromkeys(rows, b"the same"))
     assert found.stands.sum() == 1
     assert sorted(map(str, found.counts())) == sorted(
         map(str, [(Bucket.USED, None, 1), (Bucket.REPEATED, Reason.SAME_VERSION, 2)])

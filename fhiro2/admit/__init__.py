@@ -162,7 +162,11 @@ class Admitter:
 
     def _setting(self, found: Observation, content: bytes) -> _Setting:
         subject = self._subject(found)
-        effective, cautions = self._effective(found)
+        text = found.effectiveDateTime
+        if text is None or found.effectivePeriod or found.effectiveInstant or found.effectiveTiming:
+            effective, cautions = self._effective(found)
+        else:
+            effective, cautions = moment(text, self._zone)
         issued = None if found.issued is None else moment(found.issued, self._zone)[0]
         meta = found.meta
         if meta is not None and meta.lastUpdated is not None:
@@ -194,7 +198,7 @@ class Admitter:
             self._samples.number(self._sample(found, specimen)),
             self._rows.origin(found.id or "", version, "" if version else content_hash(content).hex()),
             specimen.kind if specimen else Specimen.UNKNOWN,
-            self._body_site(found, specimen),
+            Specimen.UNKNOWN if found.bodySite is None and specimen is None else self._body_site(found, specimen),
             laboratory,
             vital_sign,
         )
@@ -304,9 +308,8 @@ class Admitter:
         raise SkipError(Reason.SUBJECT, "the subject's identifier names no patient, or several")
 
     def _effective(self, found: Observation) -> tuple[int, int]:
+        """The instant of anything but a plain dateTime."""
         text, period = found.effectiveDateTime, found.effectivePeriod
-        if period is None and found.effectiveInstant is None and found.effectiveTiming is None and text is not None:
-            return moment(text, self._zone)
         stated = (text, found.effectiveInstant, period, found.effectiveTiming)
         if sum(one is not None for one in stated) > 1:
             raise SkipError(Reason.INVARIANT, "more than one effective[x]")

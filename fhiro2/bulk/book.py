@@ -27,9 +27,7 @@ class Book:
     def add(self, unit: Raw, key: str, version: str, updated: int, admission: Admission, origin: int = -1) -> int:
         """Enter one version; what was refused, whole or in part, is kept for another try."""
         bucket, reason, detail, parts = admission
-        row = self.versions.add(
-            key, version, updated, hash(unit.content), bucket, reason, origin, unit.file, unit.line, unit.entry
-        )
+        row = self.versions.add(key, version, updated, bucket, reason, origin, unit.file, unit.line, unit.entry)
         if parts:
             self._parts[row] = tuple(error.reason for _, error in parts)
         if self._quarantine is not None and (parts or bucket is Bucket.QUARANTINED):

@@ -20,7 +20,7 @@ from fhiro2.model import (
     pick,
 )
 from fhiro2.pair.sample import in_sample, leads
-from fhiro2.pair.search import NOBODY, Choice, Keys, keys, latest, nearest, trust, within
+from fhiro2.pair.search import NOBODY, Choice, Keys, keys, latest, nearest, within
 from fhiro2.settings import Settings, Windows
 
 ARTERIAL, MIXED, CENTRAL = "arterial", "mixed-venous", "central-venous"
@@ -137,7 +137,7 @@ class _Pairing:
         own, at = table.columns["hb"], self._at(table)
         keep = own.known() | (own.why == Why.TWO_CANDIDATES)
         earlier = within(self.keyed, self._stream("hb"), at, _micro(self.windows.haemoglobin), 0)
-        choice = nearest(self.keyed, earlier, len(at), trust(self.readings))
+        choice = nearest(self.keyed, earlier, len(at), self.keyed.trust)
         column = self._column(table, choice, "hb")
         column.cautions[choice.found()] |= np.uint64(Caution.EARLIER_HAEMOGLOBIN)
         table.columns["hb"] = choose(keep, own, column)

@@ -12,7 +12,7 @@ import numpy as np
 
 from fhiro2.catalogue import QUANTITY
 from fhiro2.model import Integers, Kind, Readings, Specimen, Truths
-from fhiro2.pair.search import NOBODY, Candidates, Choice, Keys, nearest, trust, within
+from fhiro2.pair.search import NOBODY, Candidates, Choice, Keys, nearest, within
 
 _ANY_BLOOD = frozenset({"hb", "fcohb", "fmethb", "lactate"})  # the same in blood of any origin, so UNKNOWN joins
 
@@ -89,7 +89,7 @@ def _shared(keyed: Keys, sampled: Sampled, stream: Integers) -> Choice:
     row = stream[order][place]
     found = Candidates(anchor, row, keyed.of[row] - sampled.at[anchor])
     found = found.where(readings["patient"][row] == readings["patient"][sampled.lead[anchor]])
-    return nearest(keyed, found, len(wanted), trust(readings))
+    return nearest(keyed, found, len(wanted), keyed.trust)
 
 
 def _timed(keyed: Keys, sampled: Sampled, stream: Integers, same_sample: int) -> tuple[Choice, Truths]:
@@ -101,7 +101,7 @@ def _timed(keyed: Keys, sampled: Sampled, stream: Integers, same_sample: int) ->
     device, other_device = readings["device"][sampled.lead[found.anchor]], readings["device"][found.row]
     contradicting = (device >= 0) & (other_device >= 0) & (device != other_device)
     found = found.where(~elsewhere & ~contradicting)
-    rank = trust(readings)
+    rank = keyed.trust
     best = np.full(count, np.iinfo(np.int64).max)
     np.minimum.at(best, found.anchor, rank[found.row])
     return nearest(keyed, found, count, rank), _torn(

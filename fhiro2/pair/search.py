@@ -5,7 +5,7 @@ Patient and time share one integer key, so that one binary search serves all pat
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 
@@ -15,19 +15,17 @@ _TIME_BITS = 51
 NOBODY = -1
 
 
-def trust(readings: Readings) -> Integers:
-    """The rank of every reading beside others of its quantity: co-oximetry, measured, set, calculated, estimated."""
-    result: Integers = 2 * readings["kind"].astype(np.int64) + ~readings["oximetry"]
-    return result
-
-
 @dataclass(frozen=True)
 class Keys:
-    """The key of every reading: patient in the upper bits, microseconds since the batch's first in the lower."""
+    """The key of every reading: patient in the upper bits, microseconds since the batch's first in the lower.
+
+    ``trust`` ranks readings of one quantity: co-oximetry, measured, set, calculated, estimated; the lowest is best.
+    """
 
     readings: Readings
     of: Integers
     base: int
+    trust: Integers
 
     def at(self, patient: Integers, effective: Integers) -> Integers:
         """Keys for any patient numbers and times."""
@@ -39,8 +37,9 @@ def keys(timelines: Timelines) -> Keys:
     """The keys of a batch."""
     readings = timelines.readings
     base = int(readings["effective"].min()) if len(readings) else 0
-    made = Keys(readings, np.zeros(0, dtype=np.int64), base)
-    return Keys(readings, made.at(readings["patient"], readings["effective"]), base)
+    trust = 2 * readings["kind"].astype(np.int64) + ~readings["oximetry"]
+    made = Keys(readings, np.zeros(0, dtype=np.int64), base, trust)
+    return replace(made, of=made.at(readings["patient"], readings["effective"]))
 
 
 @dataclass

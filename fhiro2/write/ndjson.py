@@ -52,7 +52,7 @@ class NdjsonSink:
         hashes: dict[str, str] = {}
         for block in values(outcome, self.run):
             self._append("observations.ndjson", block.lines)
-            self._append("provenance.ndjson", [line.encode() for line in block.provenance])
+            self._append("provenance.ndjson", ["\n".join(block.provenance).encode()] if block.provenance else [])
             self.derived += len(block.lines)
             if outcome.flags:
                 hashes.update(zip(block.ids, block.hashes, strict=True))
