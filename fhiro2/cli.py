@@ -33,6 +33,7 @@ app.add_typer(rules_app, name="rules")
 app.add_typer(quarantine_app, name="quarantine")
 
 PASSES = 2  # sources are read twice: context first
+QUIET_SECONDS = 2  # what ends sooner shows no progress
 INTENDED_USE = (
     "fhiro2 reads Observations that a hospital already keeps, computes oxygen-transport values with their "
     "uncertainty, and raises flags for review by trained staff."
@@ -80,8 +81,8 @@ def replay(
     from fhiro2.terminal import show_account, show_derived
 
     given = _settings(settings), _mapping(mapping), _pack(rules)
-    with _reading(inputs) as sources:
-        account = run(sources, out, *given).as_json()
+    with _reading(inputs) as (sources, advance):
+        account = run(sources, out, *given, lambda _, share: advance.computed(share)).as_json()
     if as_json:
         _print_json(account)
     else:
@@ -105,7 +106,7 @@ def census(
     from fhiro2.terminal import show_census
 
     given = _settings(settings), _mapping(mapping), _pack(rules)
-    with _reading(inputs) as sources:
+    with _reading(inputs) as (sources, _):
         found = run(sources, *given)
     if as_json:
         _print_json(found.as_json())
@@ -185,7 +186,7 @@ def evaluators(*, durable: bool) -> str:
 
 
 @contextmanager
-def _reading(inputs: list[str]) -> Iterator[list[NdjsonSource]]:
+def _reading(inputs: list[str]) -> Iterator[tuple[list[NdjsonSource], _Advance]]:
     """The named sources, with progress on standard error once reading takes longer than two seconds."""
     from fhiro2.read.ndjson import NdjsonSource
 
@@ -197,26 +198,35 @@ def _reading(inputs: list[str]) -> Iterator[list[NdjsonSource]]:
             grouped.setdefault(name if named else "feed", []).append(Path(path if named else text))
         sources = [NdjsonSource(name, paths, advance) for name, paths in grouped.items()]
         advance.total = PASSES * sum(source.size() for source in sources)
-        yield sources
+        yield sources, advance
 
 
 class _Advance:
-    """Counts bytes read and shows them once two seconds have passed."""
+    """Shows how far reading and then computing are, once two seconds have passed."""
 
     def __init__(self, progress: Progress) -> None:
         self.total = 0
         self._progress = progress
         self._started = time.monotonic()
         self._done = 0
-        self._task: Any = None
+        self._tasks: dict[str, Any] = {}
 
     def __call__(self, size: int) -> None:
+        """Note ``size`` more bytes read."""
         self._done += size
-        if self._task is None and time.monotonic() - self._started > 2:
+        self._show("reading", self._done, self.total)
+
+    def computed(self, share: float) -> None:
+        """Note the share of the readings that is computed and written."""
+        self._show("computing", share * self.total, self.total)
+
+    def _show(self, task: str, done: float, total: int) -> None:
+        if task not in self._tasks:
+            if time.monotonic() - self._started < QUIET_SECONDS:
+                return
             self._progress.start()
-            self._task = self._progress.add_task("reading", total=self.total)
-        if self._task is not None:
-            self._progress.update(self._task, completed=self._done)
+            self._tasks[task] = self._progress.add_task(task, total=total)
+        self._progress.update(self._tasks[task], completed=done)
 
 
 @contextmanager

@@ -56,7 +56,7 @@ def run_demo(console: Console, out: Path) -> None:
     flags: list[Flag] = []
     pictures: list[tuple[str, ...]] = []
 
-    def watch(outcome: Outcome) -> None:
+    def watch(outcome: Outcome, _: float) -> None:
         flags.extend(outcome.flags)
         pictures.extend(last_pictures(outcome))
 

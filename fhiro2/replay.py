@@ -33,12 +33,12 @@ def replay(
     settings: Settings,
     mapping: Mapping,
     pack: Pack,
-    watch: Callable[[Outcome], None] = lambda outcome: None,
+    watch: Callable[[Outcome, float], None] = lambda outcome, share: None,
 ) -> Account:
     """Read ``sources``, write everything into the folder ``out`` and return the account.
 
-    ``watch`` sees each batch's outcome. Raises StopError for input that cannot be read at all; a failed run leaves
-    none of its files under their names.
+    ``watch`` sees each batch's outcome and which share of the readings is done with it. Raises StopError for input
+    that cannot be read at all; a failed run leaves none of its files under their names.
     """
     out.mkdir(parents=True, exist_ok=True)
     started = datetime.now(UTC)
@@ -48,11 +48,13 @@ def replay(
         with few_collections(), NdjsonSink(out, run) as sink:
             intake = take_in(sources, settings, mapping, quarantine)
             account, names, origins = intake.account, intake.rows.names, intake.rows.origins
+            done, everything = 0, len(intake.readings)
             for timelines in batches(intake.readings, names, origins, intake.roster):
                 outcome, _ = assess(timelines, settings, pack)
                 tally(account, outcome)
                 sink.write(outcome)
-                watch(outcome)
+                done += len(timelines.readings)
+                watch(outcome, done / everything)
     except BaseException:
         quarantine.close(keep=False)
         raise

@@ -11,7 +11,7 @@ import numpy as np
 import pytest
 
 from fhiro2 import normal
-from fhiro2.derive import alveolar, dissociation, oxygen_content, transport, uncertainty
+from fhiro2.derive import acid_base, alveolar, dissociation, oxygen_content, transport, uncertainty
 from fhiro2.derive.constants import (
     BINDING_OXYHAEMOGLOBIN,
     BINDING_TOTAL,
@@ -142,6 +142,7 @@ FORMULAS = {
     "ph2o_buck": lambda given: alveolar.water_vapour(given["temp_C"]),
     "pb_west_altitude": lambda given: alveolar.pressure_at_altitude(given["h_km"]),
     "normal_probability": lambda given: normal.probability_below(0.0, 1.0, given["z"]),
+    "hco3_clsi_6p095": lambda given: acid_base.bicarbonate(given["pH"], given["pco2"]),
     "gum_u_cao2": content_uncertainty,
     "gum_u_o2er_shared_hb": extraction_uncertainty,
     "gum_u_aa_full": gradient_uncertainty,
@@ -204,7 +205,7 @@ def parsed(module):
 
 COEFFICIENTS = [
     pytest.param(module, number, id=f"{module.__name__}:{node.lineno}:{node.value}")
-    for module in (dissociation, oxygen_content, alveolar, transport, normal)
+    for module in (acid_base, dissociation, oxygen_content, alveolar, transport, normal)
     for number, node in enumerate(parsed(module)[1])
 ]
 

@@ -403,7 +403,7 @@ def test_wrong_files_are_refused_in_words(tmp_path: Path, words: list[str], says
 def test_a_failed_replay_leaves_no_files(tmp_path: Path) -> None:
     source = NdjsonSource("ward-nine", [WARD])
 
-    def fail(outcome: Outcome) -> None:
+    def fail(outcome: Outcome, share: float) -> None:
         raise KeyboardInterrupt
 
     with pytest.raises(KeyboardInterrupt):
