@@ -163,6 +163,8 @@ def rules_check(
 def about() -> None:
     """Intended use, exclusions, versions, and which evaluators run."""
     import importlib.util
+    import platform
+    from importlib.metadata import version
 
     from fhiro2.codes import LOINC_NOTICE, code_table
 
@@ -174,6 +176,8 @@ def about() -> None:
     for line in EXCLUSIONS:
         console.print(f"  {line}", highlight=False)
     console.print(f"\nrules: {len(pack.rules)} in pack {pack.hash[:12]}; codes: {len(code_table())}", highlight=False)
+    versions = ", ".join(f"{name} {version(name)}" for name in ("fhir.resources", "msgspec", "numpy", "pydantic"))
+    console.print(f"runs on Python {platform.python_version()}, {versions}", highlight=False)
     console.print(f"evaluators: {evaluators(durable=durable)}", highlight=False)
     console.print(f"\n{LOINC_NOTICE}", style="dim", highlight=False)
 
@@ -241,6 +245,8 @@ def _progress() -> Iterator[_Advance]:
     )
     try:
         yield _Advance(progress)
+    except KeyboardInterrupt:
+        raise StopError("stopped by the keyboard; nothing half-written is left, run it again") from None
     finally:
         progress.stop()
 

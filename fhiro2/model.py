@@ -41,13 +41,12 @@ class Specimen(IntEnum):
 
 
 class SpecimenEvidence(IntFlag):
-    """What the kind of blood was read from."""
+    """What the kind of blood was read from; a mapped method counts as body site."""
 
     NOTHING = 0
     CODE = 1
     SPECIMEN = 2
     BODY_SITE = 4
-    PANEL = 8
 
 
 class Kind(IntEnum):
@@ -184,6 +183,7 @@ class Why(IntEnum):
     UNCERTAIN_DIFFERENCE = 19
     UNBOUNDED = 20
     AGE_EXCLUDES = 21
+    BEFORE_TRANSFUSION = 22
 
 
 WHY_TEXT: dict[Why, str] = {
@@ -204,6 +204,7 @@ WHY_TEXT: dict[Why, str] = {
     Why.UNCERTAIN_DIFFERENCE: "the arterial-venous difference is within twice its uncertainty",
     Why.UNBOUNDED: "too many inputs are known only as bounds",
     Why.AGE_EXCLUDES: "excluded or not decidable by age",
+    Why.BEFORE_TRANSFUSION: "haemoglobin taken before a transfusion or bleed",
 }
 
 

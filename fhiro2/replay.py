@@ -54,7 +54,7 @@ def replay(
                 tally(account, outcome)
                 sink.write(outcome)
                 done += len(timelines.readings)
-                watch(outcome, done / everything)
+                watch(outcome, done / max(everything, 1))
     except BaseException:
         quarantine.close(keep=False)
         raise

@@ -250,7 +250,8 @@ def _timelines(readings: Readings, keys: list[str], names: Names, origins: Origi
     identities = np.array([origins.ids[origin] for origin in readings["origin"].tolist()], dtype=np.bytes_)
     _, tie = np.unique(identities, return_inverse=True)
     readings = readings[np.lexsort((readings["part"], tie, readings["effective"], readings["patient"]))]
-    readings["uncertainty"] = default_uncertainty(readings["quantity"], _middle(readings))
+    usual = default_uncertainty(readings["quantity"], _middle(readings))
+    readings["uncertainty"] = np.where(np.isnan(readings["uncertainty"]), usual, readings["uncertainty"])
     patients = [_patient(key, roster) for key in keys]
     return Timelines(readings, patients, [roster.facts.get(key, ()) for key in keys], names, origins)
 

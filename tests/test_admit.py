@@ -59,6 +59,13 @@ SITES = mapping(
 )  # fmt: skip
 
 
+def test_a_mapped_method_states_the_blood_as_a_body_site_does() -> None:
+    value = observation(code="11556-8", method=concept((SITE, "radial")))
+    found = reading(value, given=SITES)
+    assert (found.specimen, found.evidence) == (ARTERIAL, SpecimenEvidence.BODY_SITE)
+    assert refusal(observation(code="2705-2", method=concept((SITE, "radial"))), given=SITES) is Reason.SPECIMEN
+
+
 @pytest.mark.parametrize("on_specimen", [True, False], ids=["site of the specimen", "site of the result"])
 @pytest.mark.parametrize(("code", "kind", "site"), list(product(BY_CODE, BY_TYPE, BY_SITE)))
 def test_blood_is_what_all_evidence_allows(code: str, kind: str | None, site: str | None, on_specimen: bool) -> None:

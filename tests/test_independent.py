@@ -93,7 +93,9 @@ def pack() -> Pack:
 
 
 def run(folder: Path, out: Path, seen: list[Outcome]) -> None:
-    replay([NdjsonSource("feed", [folder])], out, Settings(), NO_MAPPING, pack(), seen.append)
+    replay(
+        [NdjsonSource("feed", [folder])], out, Settings(), NO_MAPPING, pack(), lambda outcome, _: seen.append(outcome)
+    )
 
 
 def census_of(folder: Path, mapping: Mapping = NO_MAPPING) -> Census:

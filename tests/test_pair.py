@@ -11,7 +11,7 @@ import pytest
 
 from fhiro2.model import Caution, Why
 from fhiro2.settings import Settings, Windows
-from tests.feeds import Paired, at, component, observation, pair, panel, specimen
+from tests.feeds import SITE, Paired, at, component, concept, mapping, observation, pair, panel, specimen
 
 Resource = dict[str, Any]
 MINUTE, HOUR, DAY = 60, 3600, 86400
@@ -109,6 +109,44 @@ def test_a_site_can_set_its_windows() -> None:
     assert pair(GAS, partner, settings=Settings(windows=Windows(cardiac_output=20))).sources("co") == ["co"]
 
 
+# --- how sure a partner is -----------------------------------------------------------------------------------------
+
+
+@pytest.mark.parametrize(("code", "share"), [("8737-9", 0.10), ("8735-3", 0.175), ("8741-1", 0.20)])
+def test_cardiac_output_is_as_sure_as_its_method(code: str, share: float) -> None:
+    """Thermodilution 10 % (Stetz 1982), Doppler 15 to 20 %, method unknown 20 % (common practice)."""
+    column = beside(monitor("co", code, 5, "L/min", 0)).column("co")
+    assert column.uncertainty.tolist() == [pytest.approx(5 * share)]
+
+
+def test_an_earlier_haemoglobin_is_less_sure() -> None:
+    """2 % at once, growing to 10 % after a day (judgement of this project): 4 h add a sixth of 9.8 %."""
+    column = beside(observation("hb", "718-7", 10, "g/dL", -4 * HOUR)).column("hb")
+    assert column.uncertainty.tolist() == [pytest.approx(10 * (0.02**2 + (0.098 / 6) ** 2) ** 0.5)]
+
+
+@pytest.mark.parametrize(
+    ("start", "end", "why"),
+    [(-HOUR, -HOUR, Why.BEFORE_TRANSFUSION), (-3 * HOUR, -3 * HOUR, Why.KNOWN), (60, 120, Why.KNOWN)],
+    ids=["between", "before both", "after the gas"],
+)
+def test_a_haemoglobin_from_before_a_transfusion_is_not_taken(start: int, end: int, why: Why) -> None:
+    site = mapping(facts=[{"system": SITE, "code": "RBC", "fact": "transfusion-or-bleed"}])
+    transfusion = {
+        "resourceType": "Procedure",
+        "id": "t",
+        "status": "completed",
+        "code": concept((SITE, "RBC")),
+        "subject": {"reference": "Patient/p1"},
+        "performedPeriod": {"start": at(start), "end": at(end)},
+    }
+    made = pair(GAS, observation("hb", "718-7", 10, "g/dL", -2 * HOUR), transfusion, given=site)
+    assert made.why("hb") is why
+    saturation = observation("so2", "2708-6", 92, "%")
+    content = pair(GAS, saturation, observation("hb", "718-7", 10, "g/dL", -2 * HOUR), transfusion, given=site)
+    assert content.why("oxygen-content-arterial") is why
+
+
 # --- inspired oxygen in force ------------------------------------------------------------------------------------
 
 
@@ -117,6 +155,14 @@ def test_inspired_oxygen_stays_in_force_while_the_ventilator_lives(alive: int | 
     fio2 = monitor("fio2", "3150-0", 40, "%", -3 * HOUR)
     ventilator = [] if alive is None else [monitor("peep", "76248-4", 8, "cm[H2O]", -alive)]
     assert beside(fio2, *ventilator).sources("fio2") == (["fio2"] if found else [""])
+
+
+@pytest.mark.parametrize(("alive", "found"), [(HOUR, True), (HOUR + 1, False)])
+def test_end_expiratory_pressure_stays_in_force_likewise(alive: int, found: bool) -> None:
+    peep = monitor("peep", "76248-4", 8, "cm[H2O]", -3 * HOUR)
+    assert beside(peep, monitor("rate", "19834-1", 14, "/min", -alive)).sources("peep") == (
+        ["peep"] if found else [""]
+    )
 
 
 @pytest.mark.parametrize(("beyond", "found"), [(0, True), (1, False)])

@@ -30,6 +30,8 @@ _METHOD_CAUTION: Final = {
     "legacy": int(Caution.LEGACY_CODE),
     "from-haematocrit": int(Caution.CALCULATED_HAEMOGLOBIN),
 }
+_METHOD_DOUBT: Final = {"unknown": 0.20, "fick": 0.20, "doppler": 0.175}
+"""Relative standard uncertainty of a cardiac output by method, where it is not the catalogue's (common practice)."""
 
 
 class Admission(NamedTuple):
@@ -198,7 +200,7 @@ class Admitter:
             self._samples.number(self._sample(found, specimen)),
             self._rows.origin(found.id or "", version, "" if version else content_hash(content).hex()),
             specimen.kind if specimen else Specimen.UNKNOWN,
-            Specimen.UNKNOWN if found.bodySite is None and specimen is None else self._body_site(found, specimen),
+            self._site(found, specimen) if found.bodySite or found.method or specimen else Specimen.UNKNOWN,
             laboratory,
             vital_sign,
         )
@@ -240,7 +242,7 @@ class Admitter:
             value.value,
             value.low,
             value.high,
-            NAN,
+            _METHOD_DOUBT[code.method] * value.value if code.method in _METHOD_DOUBT else NAN,
             value.answer,
             blood,
             evidence,
@@ -331,11 +333,13 @@ class Admitter:
             return self._interpreter.specimen(contained)
         return self._context.specimens.get(self._local(text))
 
-    def _body_site(self, found: Observation, specimen: SpecimenEntry | None) -> Specimen:
-        if found.bodySite is not None:
-            stated = self._interpreter.kind(found.bodySite)
-            if stated is not Specimen.UNKNOWN:
-                return stated
+    def _site(self, found: Observation, specimen: SpecimenEntry | None) -> Specimen:
+        """The kind of blood that body site or method state by the site's mapping."""
+        for concept in (found.bodySite, found.method):
+            if concept is not None:
+                stated = self._interpreter.kind(concept)
+                if stated is not Specimen.UNKNOWN:
+                    return stated
         return specimen.site if specimen else Specimen.UNKNOWN
 
     def _note_panel(self, found: Observation) -> None:

@@ -13,7 +13,12 @@ from fhiro2.derive.uncertainty import interval, propagate
 from fhiro2.model import AnchorTable, Caution, Column, Floats, Integers, Truths, Why
 
 NOBODY = -1
-_PASSED_ON = (Why.DIFFERENT_BASIS, Why.SUSPECT_SAMPLE, Why.NOT_COMPUTED_FROM_CALCULATED)
+_PASSED_ON = (
+    Why.DIFFERENT_BASIS,
+    Why.SUSPECT_SAMPLE,
+    Why.NOT_COMPUTED_FROM_CALCULATED,
+    Why.BEFORE_TRANSFUSION,
+)
 
 
 @dataclass(frozen=True)

@@ -6,6 +6,7 @@ import numpy as np
 
 from fhiro2.catalogue import INPUT_BY_NAME, MEASURED_BY_NAME, QUANTITY
 from fhiro2.model import (
+    DAY,
     HOUR,
     MINUTE,
     AnchorTable,
@@ -26,6 +27,7 @@ from fhiro2.settings import Settings, Windows
 ARTERIAL, MIXED, CENTRAL = "arterial", "mixed-venous", "central-venous"
 PULSE, OUTPUT, BODY = "pulse-oximetry", "cardiac-output", "body"
 _ALIVE = ("peep", "paw_mean", "vt", "vt_set", "rr_vent_set", "rr_vent_total")
+_STALE = 0.098  # relative doubt that a day adds to a haemoglobin (2 % at once, 10 % after a day: project's judgement)
 _CHANGE = 0.005  # inspired oxygen: less than this is no change
 _APART = 0.30  # two gases of one minute that differ by more are discordant
 _FACTS = ("ecmo", "intracardiac-shunt", "transfusion-or-bleed")
@@ -50,7 +52,8 @@ def tables(timelines: Timelines, settings: Settings) -> dict[str, AnchorTable]:
     made[OUTPUT] = pairing.reading_table(OUTPUT, "co", "co")
     made[BODY] = pairing.reading_table(BODY, "weight", "weight")
     for table in (arterial, made[PULSE]):
-        pairing.inspired_oxygen(table)
+        pairing.in_force(table, "fio2")
+    pairing.in_force(arterial, "peep")
     for table in (arterial, made[OUTPUT], made[BODY]):
         pairing.body(table)
     for table in made.values():
@@ -61,6 +64,7 @@ def tables(timelines: Timelines, settings: Settings) -> dict[str, AnchorTable]:
 class _Pairing:
     def __init__(self, timelines: Timelines, keyed: Keys, windows: Windows) -> None:
         self.readings = timelines.readings
+        self.facts = timelines.facts
         self.keyed = keyed
         self.windows = windows
         value, low, high = self.readings["value"], self.readings["low"], self.readings["high"]
@@ -112,18 +116,19 @@ class _Pairing:
             joined = name if name not in arterial.columns else f"{name}_{suffix}"
             arterial.columns[joined] = _taken(column, place, choice.found(), why)
 
-    def inspired_oxygen(self, table: AnchorTable) -> None:
-        """The inspired oxygen in force: the last record, kept longer while the ventilator's feed is alive."""
+    def in_force(self, table: AnchorTable, name: str) -> None:
+        """A setting in force: the last record, kept longer while the ventilator's feed is alive."""
         at = self._at(table)
-        stream = self._stream("fio2")
+        stream = self._stream(name)
         normal = latest(self.keyed, stream, at, _micro(self.windows.inspired_oxygen))
         ventilated = latest(self.keyed, stream, at, _micro(self.windows.inspired_oxygen_ventilated))
         alive = latest(self.keyed, self._stream(*_ALIVE), at, _micro(self.windows.ventilator_alive)).found()
         ventilated.row[~alive] = NOBODY
         choice = normal.or_else(ventilated)
-        column = self._column(table, choice, "fio2")
-        column.cautions[self._changed(stream, at, choice)] |= np.uint64(Caution.NOT_STEADY)
-        table.columns["fio2"] = column
+        column = self._column(table, choice, name)
+        if name == "fio2":
+            column.cautions[self._changed(stream, at, choice)] |= np.uint64(Caution.NOT_STEADY)
+        table.columns[name] = column
 
     def body(self, table: AnchorTable) -> None:
         """Weight and height on record."""
@@ -139,8 +144,20 @@ class _Pairing:
         earlier = within(self.keyed, self._stream("hb"), at, _micro(self.windows.haemoglobin), 0)
         choice = nearest(self.keyed, earlier, len(at), self.keyed.trust)
         column = self._column(table, choice, "hb")
+        taken = self.readings["effective"][np.maximum(choice.row, 0)] if len(self.readings) else table.effective
         column.cautions[choice.found()] |= np.uint64(Caution.EARLIER_HAEMOGLOBIN)
+        column.uncertainty = np.hypot(column.uncertainty, _STALE * column.value * (table.effective - taken) / DAY)
+        column.why[choice.found() & self._bled(table, taken)] = Why.BEFORE_TRANSFUSION
         table.columns["hb"] = choose(keep, own, column)
+
+    def _bled(self, table: AnchorTable, since: Integers) -> Truths:
+        """Where a transfusion or bleed is stated between ``since`` and the anchor."""
+        found = np.zeros(len(table.reading), dtype=bool)
+        for patient, facts in enumerate(self.facts):
+            for fact in facts:
+                if fact.fact == "transfusion-or-bleed" and fact.answer:
+                    found |= (table.patient == patient) & (fact.start <= table.effective) & (fact.end >= since)
+        return found
 
     def _around(self, table: AnchorTable) -> None:
         """What lies around an arterial sample in time: flow, temperature, pressures, SpO2."""
@@ -153,10 +170,8 @@ class _Pairing:
             stream = self._stream(quantity, "temp_blood") if name == "temp" else self._stream(quantity)
             near = within(self.keyed, stream, at, _micro(minutes), _micro(minutes))
             table.columns[name] = self._column(table, nearest(self.keyed, near, len(at)), quantity)
-        for name, minutes in (("pb", windows.barometer), ("peep", windows.inspired_oxygen)):
-            table.columns[name] = self._column(
-                table, latest(self.keyed, self._stream(name), at, _micro(minutes)), name
-            )
+        barometer = latest(self.keyed, self._stream("pb"), at, _micro(windows.barometer))
+        table.columns["pb"] = self._column(table, barometer, "pb")
 
     def _table(self, kind: str, rows: Integers) -> AnchorTable:
         readings = self.readings
