@@ -7,6 +7,7 @@ import numpy as np
 from fhiro2.derive.acid_base import bicarbonate
 from fhiro2.derive.constants import NORMAL_DPG, NORMAL_TEMPERATURE, STANDARD_PH
 from fhiro2.derive.dissociation import saturation
+from fhiro2.derive.operand import Guard
 from fhiro2.model import AnchorTable, Caution, Column, Truths, Why
 
 _STANDARD_PCO2 = 40.0
@@ -100,3 +101,9 @@ def _as_calculated(table: AnchorTable) -> Truths:
     )
     result: Truths = sao2.known() & pao2.known() & unstated & alone & (np.abs(sao2.value - curve) < _AS_CALCULATED)
     return result
+
+
+def suspect(table: AnchorTable) -> Guard:
+    """Guard against an arterial sample that may be venous."""
+    doubt = np.uint64(Caution.SUSPECT_VENOUS)
+    return Guard((table.columns["pao2"].cautions & doubt) != 0, Why.SUSPECT_SAMPLE)
