@@ -27,7 +27,7 @@ if TYPE_CHECKING:
 app = typer.Typer(
     no_args_is_help=True, add_completion=False, rich_markup_mode=None, pretty_exceptions_enable=False, help=__doc__
 )
-rules_app = typer.Typer(no_args_is_help=True, help="Check the rules.")
+rules_app = typer.Typer(no_args_is_help=True, help="Check the rules, and tell what they do.")
 quarantine_app = typer.Typer(no_args_is_help=True, help="Look at what could not be used.")
 app.add_typer(rules_app, name="rules")
 app.add_typer(quarantine_app, name="quarantine")
@@ -157,6 +157,25 @@ def rules_check(
     for line in report.lines():
         console.print(line, highlight=False, markup=False)
     raise typer.Exit(2 if report.failed else 1 if report.warned else 0)
+
+
+@rules_app.command("show")
+def rules_show(
+    rule: Annotated[str | None, typer.Argument(help="id of one rule; all of them without it")] = None,
+    rules: RulesFolder = None,
+) -> None:
+    """Tell what the rules do, in words made from the rules themselves."""
+    from fhiro2.judge.words import told
+
+    found = [one for one in _pack(rules).rules if rule in (None, one.id)]
+    if not found:
+        raise StopError(f"no rule {rule!r} in this pack; `fhiro2 rules show` tells all of them")
+    console = Console()
+    for one in found:
+        title, *lines = told(one)
+        console.print(f"\n{title}", style="bold", highlight=False, markup=False)
+        for line in lines:
+            console.print(line, highlight=False, markup=False)
 
 
 @app.command()
