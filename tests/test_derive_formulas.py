@@ -83,7 +83,7 @@ def test_carbon_monoxide_lowers_p50(cohb, more):
 
 @given(number(0.05, 0.4), number(0.01, 0.3), number(10, 60))
 def test_carbon_monoxide_counts_against_active_haemoglobin_only(cohb, methb, po2):
-    """Second computation with SciPy; trap: a transcription computes FCOHb/1 - FMetHb for FCOHb/(1 - FMetHb)."""
+    """Second computation with SciPy; trap: a public copy computes FCOHb/1 - FMetHb for FCOHb/(1 - FMetHb)."""
     share = cohb / (1 - methb)
 
     def imbalance(oxygen):

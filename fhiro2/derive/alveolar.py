@@ -12,7 +12,7 @@ def water_vapour(temperature: Floats) -> Floats:
     """Saturated water vapour pressure, mm[Hg], at ``temperature`` in Cel (0 to 50; used from 25 to 41).
 
     Source: Buck AL, J Appl Meteorol 1981;20:1527-1532, with the coefficients that its author revised in 1996 (read in
-    transcriptions; within 0.03 mm[Hg] of IAPWS-IF97 from 25 to 41 Cel).
+    secondary sources; within 0.03 mm[Hg] of IAPWS-IF97 from 25 to 41 Cel).
     """
     hectopascal = 6.1121 * np.exp((18.678 - temperature / 234.5) * temperature / (257.14 + temperature))
     result: Floats = hectopascal / 10 / KILOPASCAL_PER_MMHG.value
@@ -57,7 +57,7 @@ def pressure_at_altitude(altitude: Floats) -> Floats:
     """Barometric pressure, mm[Hg], at ``altitude`` in km above the sea (0 to 9), mean over the year.
 
     Source: West JB, J Appl Physiol 1996;81:1850-1854, model atmosphere equation (coefficients read in a
-    transcription that names it).
+    secondary source that names it).
     """
     result: Floats = np.exp(6.63268 - 0.1112 * altitude - 0.00149 * altitude**2)
     return result

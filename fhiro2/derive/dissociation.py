@@ -40,7 +40,7 @@ def saturation(
     fractions. NaN where a pressure is not above 0 or any input is NaN.
 
     Source: Siggaard-Andersen M & O, Scand J Clin Lab Invest Suppl 1990;203:29-45, with Fogh-Andersen 1993;214:113-119
-    (constants read in a transcription). Core: Siggaard-Andersen et al., Clin Chem 1984;30:1646-1651.
+    (constants read in a secondary source). Core: Siggaard-Andersen et al., Clin Chem 1984;30:1646-1651.
     Assumes: carbon monoxide shares the curve with oxygen (Haldane), combined saturation solved by bisection.
     """
     affinity = _affinity(ph, pco2, dpg, methb, hbf)
