@@ -181,15 +181,14 @@ def rules_show(
 @app.command()
 def about() -> None:
     """Intended use, exclusions, versions, and which evaluators run."""
-    import importlib.util
     import platform
     from importlib.metadata import version
 
     from fhiro2.codes import LOINC_NOTICE, code_table
+    from fhiro2.judge import chain_of
 
     console = Console()
     pack = _pack(None)
-    durable = importlib.util.find_spec("durable") is not None
     console.print(f"fhiro2 {__version__}", highlight=False)
     console.print(f"\n{INTENDED_USE}\n", highlight=False)
     for line in EXCLUSIONS:
@@ -197,15 +196,15 @@ def about() -> None:
     console.print(f"\nrules: {len(pack.rules)} in pack {pack.hash[:12]}; codes: {len(code_table())}", highlight=False)
     versions = ", ".join(f"{name} {version(name)}" for name in ("fhir.resources", "msgspec", "numpy", "pydantic"))
     console.print(f"runs on Python {platform.python_version()}, {versions}", highlight=False)
-    console.print(f"evaluators: {evaluators(durable=durable)}", highlight=False)
+    console.print(f"evaluators: {evaluators(chain_of(pack.rules).evaluators)}", highlight=False)
     console.print(f"\n{LOINC_NOTICE}", style="dim", highlight=False)
 
 
-def evaluators(*, durable: bool) -> str:
-    """Which rule evaluators run, in words."""
-    if durable:
-        return "built-in three-valued evaluator; durable-rules is installed and not yet used"
-    return "built-in three-valued evaluator alone; durable-rules is not installed"
+def evaluators(names: tuple[str, ...]) -> str:
+    """Which evaluators decide what is flagged, in words; ``names`` are those that chain findings to flags."""
+    if len(names) > 1:
+        return f"conditions by the built-in one; flags from findings by {' and '.join(names)}, which must agree"
+    return f"conditions and flags by the {names[0]} one alone; durable-rules is not installed or cannot be loaded"
 
 
 @contextmanager

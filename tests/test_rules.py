@@ -1,19 +1,26 @@
-"""The shipped rules: every case, that each limit matters to a case, what texts may say; and what checking says."""
+"""The shipped rules: every case, each limit matters to a case, what texts may say; and the flags of the ward."""
 
 from __future__ import annotations
 
 import re
+from collections import Counter
 from datetime import date
+from functools import cache
 from pathlib import Path
 
 import pytest
 
 from fhiro2 import packaged
+from fhiro2.assess import assess
 from fhiro2.errors import StopError
 from fhiro2.judge import Rule, check_pack, read_pack
 from fhiro2.judge.cases import failure
 from fhiro2.judge.rulefile import Case
+from fhiro2.model import MICROSECONDS, Flag
 from fhiro2.packaged import rules_folder, ward_folder
+from fhiro2.settings import Settings
+from fhiro2.ward.scenario import BEDS, HOURS, START
+from tests.test_way import ward_timelines
 
 TODAY = date(2026, 12, 1)
 PACK = read_pack(rules_folder())
@@ -23,7 +30,7 @@ ADVICE = re.compile(
     r"\b(give|administer|transfuse|start|stop|increase|decrease|titrate|intubate|prescribe|dose|should|must|consider)\b",
     re.IGNORECASE,
 )
-LIMIT = re.compile(r"\b(below|above|at_most|at_least): ([0-9.]+)")
+LIMIT = re.compile(r"\b(below|above|at_most|at_least): (-?[0-9.]+)")
 OPPOSITE = {"below": "above", "above": "below", "at_most": "at_least", "at_least": "at_most"}
 
 
@@ -122,3 +129,55 @@ def test_shipped_folders(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> Non
     (inside / "rules").mkdir(parents=True)
     (inside / "ward").mkdir()
     assert (rules_folder(), ward_folder()) == (inside / "rules", inside / "ward")
+
+
+# --- what the ward's courses must raise (fixtures/ward/README.md and the scenario's text) ------------------------
+
+
+@cache
+def ward_flags() -> dict[tuple[str, int], list[Flag]]:
+    """The flags of the ward by rule and bed."""
+    found: dict[tuple[str, int], list[Flag]] = {}
+    for timelines in ward_timelines():
+        for flag in assess(timelines, Settings(), PACK)[0].flags:
+            found.setdefault((flag.rule, int(flag.patient.rpartition("/w9-p")[2])), []).append(flag)
+    return found
+
+
+def hour(microseconds: int) -> float:
+    return (microseconds / MICROSECONDS - START.timestamp()) / 3600
+
+
+def test_the_bed_with_carbon_monoxide_is_raised_on_arrival_and_cleared() -> None:
+    """COHb 31 % on arrival, falling to 4 % by hour 9.4; the rule's own limits are 10 and 8 %."""
+    (flag,) = ward_flags()["raised-carboxyhaemoglobin", 1]
+    (evidence,) = flag.evidence
+    assert 0.28 <= evidence.value <= 0.32
+    assert hour(flag.raised) < 1
+    assert flag.cleared is not None
+    assert 3.4 < hour(flag.cleared) < 10
+
+
+def test_the_bed_with_low_output_is_raised_by_its_extraction() -> None:
+    """Hb 11.6, 97.4 and 51 %, COHb 1.3, MetHb 0.8 %, 98 and 30.3 mmHg: by definition (15.67 - 8.14) / 15.67 = 0.48."""
+    flag = ward_flags()["high-extraction-flow-or-demand", 3][0]
+    evidence = {one.name: one.value for one in flag.evidence}
+    assert evidence["oxygen-extraction-ratio"] == pytest.approx(0.48, abs=0.04)
+    assert evidence["hb"] == pytest.approx(11.6, abs=0.6)
+    assert hour(flag.raised) < 28
+
+
+def test_an_extraction_that_low_haemoglobin_explains_is_not_called_flow_or_demand() -> None:
+    """Bed 2 bleeds to 6.5 g/dL: its extraction is above 0.40 only while its haemoglobin is below 100 g/L."""
+    assert ("low-haemoglobin-raised-extraction", 2) in ward_flags()
+    assert ("high-extraction-flow-or-demand", 2) not in ward_flags()
+
+
+def test_the_quiet_beds_raise_nothing_and_the_majority_little() -> None:
+    """Beds 7 to 12 are quiet; the seven beds of twelve with the fewest flags have at most 0.3 a patient-day."""
+    count = Counter({bed.number: 0 for bed in BEDS})
+    for (_, bed), flags in ward_flags().items():
+        count[bed] += len(flags)
+    assert {bed: count[bed] for bed in range(7, 13)} == dict.fromkeys(range(7, 13), 0)
+    majority = sorted(count.values())[: len(BEDS) // 2 + 1]
+    assert sum(majority) <= 0.3 * len(majority) * HOURS / 24

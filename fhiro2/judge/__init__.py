@@ -6,12 +6,13 @@ from collections.abc import Mapping
 
 from fhiro2.errors import StopError
 from fhiro2.judge.cases import Report, check_pack
+from fhiro2.judge.chain import chain_of
 from fhiro2.judge.condition import quantities
-from fhiro2.judge.episode import Carried, OpenEpisode, fold
+from fhiro2.judge.episode import Carried, OpenEpisode, findings, fold
 from fhiro2.judge.rulefile import Pack, Rule, read_pack
-from fhiro2.model import AnchorTable, Flag, Timelines
+from fhiro2.model import AnchorTable, Flag, Floats, Timelines
 
-__all__ = ["Carried", "OpenEpisode", "Pack", "Report", "Rule", "check_pack", "judge", "read_pack"]
+__all__ = ["Carried", "OpenEpisode", "Pack", "Report", "Rule", "chain_of", "check_pack", "judge", "read_pack"]
 
 
 def judge(
@@ -21,15 +22,21 @@ def judge(
 
     ``carried`` holds the episodes open before and is not changed. Law: judging all anchors equals judging them in
     parts, passing on what was carried, where a later flag of the same rule, patient and anchor replaces the earlier.
-    Raises StopError for a rule about a quantity that its kind of anchor does not have.
+    Raises StopError for a rule about a quantity that its kind of anchor does not have, and where the evaluators of
+    flags disagree.
     """
+    live = [rule for rule in pack.rules if rule.state == "live"]
+    for rule in live:
+        _check_columns(rule, tables)
+    chain = chain_of(pack.rules)
+    raising: dict[str, Floats] = {}
+    for kind in dict.fromkeys(rule.at for rule in live):
+        raising |= chain.raising({r.id: findings(r, timelines, tables[kind]) for r in live if r.at == kind})
     flags: list[Flag] = []
     opened = dict(carried)
-    for rule in pack.rules:
-        if rule.state == "live":
-            _check_columns(rule, tables)
-            changed, opened = fold(rule, timelines, tables[rule.at], opened)
-            flags += changed
+    for rule in live:
+        changed, opened = fold(rule, timelines, tables[rule.at], raising[rule.id], opened)
+        flags += changed
     return flags, opened
 
 

@@ -10,8 +10,9 @@ from pathlib import Path
 import numpy as np
 
 from fhiro2.catalogue import DERIVED_BY_CODE
-from fhiro2.judge.condition import UNKNOWN, canonical, evaluate
-from fhiro2.judge.episode import YEAR, fold
+from fhiro2.judge.chain import Chain, chain_of
+from fhiro2.judge.condition import UNKNOWN, AllOf, canonical, evaluate
+from fhiro2.judge.episode import YEAR, findings, fold
 from fhiro2.judge.rulefile import Case, Given, Rule, read_pack
 from fhiro2.model import MICROSECONDS, MINUTE, READING, AnchorTable, Column, Names, Origins, Patient, Timelines, Why
 
@@ -50,10 +51,12 @@ def check_pack(folder: Path, today: date) -> Report:
     Raises StopError where a file cannot be loaded.
     """
     pack = read_pack(folder)
+    by_id, chain = {rule.id: rule for rule in pack.rules}, chain_of(pack.rules)
     rules, failures, warnings = [], [], []
     for rule, file in zip(pack.rules, pack.files, strict=True):
-        wrong = [f"{file}: rule {rule.id}, {text}" for case in rule.cases if (text := failure(rule, case))]
-        failures += wrong
+        needed = [by_id[name] for name in rule.needs]
+        wrong = [text for case in rule.cases if (text := failure(rule, case, needed, chain))]
+        failures += [f"{file}: rule {rule.id}, {text}" for text in wrong]
         passed = len(rule.cases) - len(wrong)
         rules.append(f"{rule.id}/{rule.version} ({rule.state}): {passed} of {len(rule.cases)} cases passed")
         if rule.review_by <= today:
@@ -61,9 +64,13 @@ def check_pack(folder: Path, today: date) -> Report:
     return Report(pack.hash, tuple(rules), tuple(failures), tuple(warnings))
 
 
-def failure(rule: Rule, case: Case) -> str:
-    """What is wrong when ``case`` is run: its name, values, what it expects and what was found; '' if nothing."""
-    found, message, missing = _outcome(rule, case)
+def failure(rule: Rule, case: Case, needed: Sequence[Rule] = (), chain: Chain | None = None) -> str:
+    """What is wrong when ``case`` is run: its name, values, what it expects and what was found; '' if nothing.
+
+    ``needed`` are the rules that ``rule`` needs, ``chain`` that of their pack; without it these rules are the pack.
+    """
+    rules = (rule, *needed)
+    found, message, missing = _outcome(rules, case, chain or chain_of(rules))
     if found == case.expect and message == (case.message or ""):
         return ""
     expected = case.expect + (f" {case.message!r}" if case.message else "")
@@ -78,23 +85,28 @@ def failure(rule: Rule, case: Case) -> str:
     return f"case {case.name!r}: expected {expected}, got {got}; values used: age {years}; {used}"
 
 
-def _outcome(rule: Rule, case: Case) -> tuple[str, str, list[str]]:
-    """What the case finds, the message of the flag that stands, and which quantities were missing at the end."""
-    timelines, table = _laid_out(rule, case)
-    flags, opened = fold(rule, timelines, table, {})
+def _outcome(rules: Sequence[Rule], case: Case, chain: Chain) -> tuple[str, str, list[str]]:
+    """What the case finds for the first of ``rules``, which needs the others.
+
+    That is: in a word, the message of the flag that stands, and which quantities were missing at the end.
+    """
+    rule = rules[0]
+    timelines, table = _laid_out(rules, case)
+    raising = chain.raising({one.id: findings(one, timelines, table) for one in rules})
+    flags, opened = fold(rule, timelines, table, raising[rule.id], {})
     if opened:
         return "flag", next(iter(opened.values())).flag.message, []
     if flags:
         return "cleared", "", []
     if case.given[0].age_years is None:
         return "unknown", "", ["age"]
-    found = evaluate(rule.raises, table.columns)
+    found = evaluate(AllOf(tuple(one.raises for one in rules)), table.columns)
     if found.truth[-1] == UNKNOWN:
         return "unknown", "", [name for name, where in found.missing.items() if where[-1]]
     return "none", "", []
 
 
-def _laid_out(rule: Rule, case: Case) -> tuple[Timelines, AnchorTable]:
+def _laid_out(rules: Sequence[Rule], case: Case) -> tuple[Timelines, AnchorTable]:
     """A patient with one anchor for each moment of the case."""
     effective = START + MINUTE * np.array([moment.after_minutes for moment in case.given], dtype=np.int64)
     rows = np.arange(len(effective))
@@ -106,8 +118,9 @@ def _laid_out(rule: Rule, case: Case) -> tuple[Timelines, AnchorTable]:
     people = [Patient("case", "case", "Patient/case", born)]
     origins = Origins([f"moment-{row}" for row in rows], ["1"] * len(rows))
     timelines = Timelines(readings, people, [()], Names(subjects=["Patient/case"]), origins)
-    columns = {name: _column(name, [moment.values.get(name) for moment in case.given]) for name in rule.units}
-    return timelines, AnchorTable(rule.at, rows, readings["patient"], effective, effective, columns)
+    names = {name: None for rule in rules for name in rule.units}
+    columns = {name: _column(name, [moment.values.get(name) for moment in case.given]) for name in names}
+    return timelines, AnchorTable(rules[0].at, rows, readings["patient"], effective, effective, columns)
 
 
 def _column(name: str, given: Sequence[Given | None]) -> Column:

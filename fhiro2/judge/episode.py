@@ -20,9 +20,11 @@ from fhiro2.model import (
     Caution,
     Evidence,
     Flag,
+    Floats,
     Integers,
     Timelines,
     Truths,
+    Why,
 )
 
 YEAR = 365.25 * DAY
@@ -42,23 +44,35 @@ Carried = dict[tuple[str, str], OpenEpisode]
 """The open episodes by patient key and rule id."""
 
 
+def findings(rule: Rule, timelines: Timelines, table: AnchorTable) -> Floats:
+    """The probability of the rule's positive findings at the anchors of ``table``; NaN where there is none.
+
+    Positive is a condition that is true with enough probability in a patient within the rule's scope.
+    """
+    found = evaluate(rule.raises, table.columns)
+    positive = in_scope(rule, timelines, table) & (found.truth == TRUE)
+    return np.where(positive & (found.probability >= RAISED_FROM[rule.severity]), found.probability, np.nan)
+
+
 def fold(
-    rule: Rule, timelines: Timelines, table: AnchorTable, carried: Mapping[tuple[str, str], OpenEpisode]
+    rule: Rule,
+    timelines: Timelines,
+    table: AnchorTable,
+    probability: Floats,
+    carried: Mapping[tuple[str, str], OpenEpisode],
 ) -> tuple[list[Flag], Carried]:
     """The flags that ``rule`` raises or clears at the anchors of ``table``, and the episodes open after them.
 
-    Raised where the rule's condition is true with enough probability and no episode is open; cleared where its
-    clearing condition is true and it does not raise. What is unknown changes nothing.
+    Raised where ``probability`` is a number and no episode is open; cleared where it is NaN and the rule's clearing
+    condition is true. What is unknown changes nothing.
     """
-    found = evaluate(rule.raises, table.columns)
-    evaluated = in_scope(rule, timelines, table)
-    raising = evaluated & (found.truth == TRUE) & (found.probability >= RAISED_FROM[rule.severity])
-    clearing = evaluated & ~raising & (evaluate(rule.clears, table.columns).truth == TRUE)
+    raising = ~np.isnan(probability)
+    clearing = ~raising & in_scope(rule, timelines, table) & (evaluate(rule.clears, table.columns).truth == TRUE)
     opened, flags = dict(carried), []
     for place in _turns(table.patient, raising, clearing).tolist():
         key = (timelines.patients[int(table.patient[place])].key, rule.id)
         if raising[place] and key not in opened:
-            opened[key] = OpenEpisode(_flag(rule, timelines, table, place, float(found.probability[place])))
+            opened[key] = OpenEpisode(_flag(rule, timelines, table, place, float(probability[place])))
         elif clearing[place] and key in opened:
             flags.append(replace(opened.pop(key).flag, cleared=int(table.effective[place])))
     flags += [episode.flag for key, episode in opened.items() if carried.get(key) is not episode]
@@ -85,7 +99,7 @@ def _flag(rule: Rule, timelines: Timelines, table: AnchorTable, place: int, prob
     anchor = int(table.reading[place])
     row = timelines.readings[anchor]
     observation, part = timelines.origins.ids[int(row["origin"])], int(row["part"])
-    known = [name for name in quantities(rule.raises) if table.columns[name].known()[place]]
+    known = [name for name in quantities(rule.raises) if table.columns[name].why[place] == Why.KNOWN]
     bits = np.bitwise_or.reduce([table.columns[name].cautions[place] for name in known])
     doubts = [CAUTION_TEXT[one] for one in Caution(int(bits))]
     return Flag(
@@ -130,7 +144,7 @@ def _words(rule: Rule, table: AnchorTable, place: int, name: str) -> str:
         rounded = round((number - scale.offset) / scale.factor, decimals) + 0.0
         return f"{rounded:.{decimals}f}"
 
-    if not column.known()[place]:
+    if column.why[place] != Why.KNOWN:
         return "not known"
     low, high = float(column.low[place]), float(column.high[place])
     if not low < high:

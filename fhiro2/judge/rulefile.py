@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import hashlib
 import json
-from collections.abc import Iterator
+from collections.abc import Iterator, Mapping
 from dataclasses import dataclass
 from datetime import date
 from difflib import get_close_matches
@@ -22,6 +22,8 @@ from fhiro2.errors import SkipError, StopError
 from fhiro2.judge.condition import AllOf, AnyOf, Condition, Not, Operator, canonical, comparison, quantities
 
 TIME = "time"
+MOST_NEEDED = 3
+"""How many other rules a flag may need: joins of five patterns were seen to be unsafe in one evaluator of flags."""
 Place = tuple[str | int, ...]
 Item = TypeVar("Item")
 
@@ -146,7 +148,10 @@ class Case(_Frozen):
 
 
 class Rule(_Frozen):
-    """One rule as its team wrote it; ``raises`` and ``clears`` are its conditions in canonical units."""
+    """One rule as its team wrote it; ``raises`` and ``clears`` are its conditions in canonical units.
+
+    ``needs`` are rules of the same pack and kind of anchor: a flag is raised only where they too find what they seek.
+    """
 
     id: Annotated[str, StringConstraints(pattern=r"^[a-z0-9]+(-[a-z0-9]+)*$")]
     version: int = Field(ge=1)
@@ -159,6 +164,7 @@ class Rule(_Frozen):
     intent: Text
     at: Literal["arterial", "mixed-venous", "central-venous", "pulse-oximetry", "cardiac-output", "body"]
     scope: Scope
+    needs: Annotated[Some[Text], Field(max_length=MOST_NEEDED)] = ()
     raise_when: Clause = Field(alias="raise")
     clear_when: Clause = Field(alias="clear")
     message: Text
@@ -199,30 +205,39 @@ def read_pack(folder: Path) -> Pack:
     if not folder.is_dir():
         raise StopError(f"{folder}: not a folder; name the folder of the rules")
     found: dict[str, tuple[Rule, str]] = {}
+    read: list[tuple[Path, Rule, Marks]] = []
     mistakes = [f"{path}:1:1: not read; end the name in .yaml" for path in sorted(folder.rglob("*.yml"))]
     for path in sorted(folder.rglob("*.yaml")):
         name = path.relative_to(folder).as_posix()
         try:
-            rule = read_rule(path)
+            rule, marks = _read(path)
         except StopError as error:
             mistakes.append(str(error))
             continue
         if rule.id in found:
             mistakes.append(f"{path}:1:1: the rule {rule.id} is also in {found[rule.id][1]}; remove one")
         found[rule.id] = rule, name
+        read.append((path, rule, marks))
+    rules = {name: found[name][0] for name in sorted(found)}
+    if not mistakes:
+        for path, rule, marks in read:
+            mistakes += [_placed(str(path), marks, place, text) for place, text in _needs(rule, rules)]
     if mistakes:
         raise StopError("\n".join(mistakes))
     if not found:
         raise StopError(f"{folder}: holds no rule; name a folder with rule files (*.yaml)")
-    rules = tuple(found[name][0] for name in sorted(found))
-    content = [rule.model_dump(mode="json", by_alias=True, exclude_unset=True) for rule in rules]
+    content = [rule.model_dump(mode="json", by_alias=True, exclude_unset=True) for rule in rules.values()]
     canonical_content = json.dumps(content, sort_keys=True, ensure_ascii=False, separators=(",", ":"))
     digest = hashlib.sha256(canonical_content.encode()).hexdigest()
-    return Pack(rules, tuple(found[rule.id][1] for rule in rules), digest)
+    return Pack(tuple(rules.values()), tuple(found[name][1] for name in rules), digest)
 
 
 def read_rule(path: Path) -> Rule:
     """The rule in one file; raises StopError with ``file:line:column`` and what to do for every mistake."""
+    return _read(path)[0]
+
+
+def _read(path: Path) -> tuple[Rule, Marks]:
     try:
         content = path.read_bytes()
     except OSError as error:
@@ -232,7 +247,7 @@ def read_rule(path: Path) -> Rule:
     mistakes = [*_identity(rule, path.stem), *_message(rule), *_cases(rule)]
     if mistakes:
         raise StopError("\n".join(_placed(str(path), marks, place, text) for place, text in mistakes))
-    return rule
+    return rule, marks
 
 
 def _placed(name: str, marks: Marks, place: Place, text: str) -> str:
@@ -274,11 +289,45 @@ def _cases(rule: Rule) -> Iterator[tuple[Place, str]]:
         for step, moment in enumerate(case.given):
             for name, given in moment.values.items():
                 try:
-                    if name not in rule.units:
-                        raise ValueError(f"the rule does not ask for it, only for {', '.join(rule.units)}")
                     _check_unit(name, given.unit)
                 except ValueError as error:
                     yield (*place, "given", step, name), f"{error}; change it"
+
+
+def _needs(rule: Rule, rules: Mapping[str, Rule]) -> Iterator[tuple[Place, str]]:
+    """What is wrong between this rule and those of its pack."""
+    for number, name in enumerate(rule.needs):
+        place: Place = ("needs", number)
+        if name not in rules:
+            yield place, f"no rule {name!r} in this pack; write the id of one"
+        elif rule.id in _reached(name, rules):
+            yield place, f"{name} is, or needs, this rule itself; remove one of the needs"
+        elif rules[name].at != rule.at:
+            yield place, f"{name} is at {rules[name].at} anchors, not at {rule.at}; remove it"
+        elif rule.state == "live" != rules[name].state:
+            yield place, f"{name} is {rules[name].state}, so that this live rule could raise nothing; remove it"
+    asked = dict.fromkeys(unit for name in (rule.id, *rule.needs) if name in rules for unit in rules[name].units)
+    for place, name in _given(rule):
+        if name not in asked:
+            yield place, f"the rule does not ask for it, only for {', '.join(asked)}; change it"
+
+
+def _reached(name: str, rules: Mapping[str, Rule]) -> set[str]:
+    """The rule itself and all that it needs, directly or through others."""
+    reached, waiting = {name}, [name]
+    while waiting:
+        rule = rules.get(waiting.pop())
+        further = set(rule.needs) - reached if rule else set()
+        reached |= further
+        waiting += further
+    return reached
+
+
+def _given(rule: Rule) -> Iterator[tuple[Place, str]]:
+    for number, case in enumerate(rule.cases):
+        for step, moment in enumerate(case.given):
+            for name in moment.values:
+                yield ("cases", number, "given", step, name), name
 
 
 def _check_unit(quantity: str, unit: str) -> None:
