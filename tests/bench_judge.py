@@ -1,6 +1,6 @@
 """What judging costs beside one comparison: run with ``python tests/bench_judge.py [ANCHORS]``.
 
-The shipped rules judge made-up arterial anchors, one in fifty with low values, on one core. What counts are the
+The shipped rules judge made-up arterial anchors, one in fifty with something amiss, on one core. What counts are the
 ratios to one NumPy comparison of one column of the same anchors.
 """
 
@@ -19,7 +19,12 @@ from fhiro2.packaged import rules_folder
 
 PER_PATIENT = 100
 START = 1_772_344_800_000_000  # 2026-03-01T06:00:00Z
-USUAL = {"pao2": (90.0, 50.0), "sao2": (0.97, 0.85), "hb": (12.0, 6.0), "oxygen-extraction-ratio": (0.28, 0.5)}
+USUAL = {
+    "pao2": (90.0, 50.0), "sao2": (0.97, 0.85), "hb": (12.0, 6.0), "oxygen-extraction-ratio": (0.28, 0.5),
+    "lactate": (1.2, 5.0), "temp": (37.0, 37.0), "fcohb": (0.01, 0.2), "fmethb": (0.01, 0.08),
+    "alveolar-arterial-gradient": (20.0, -30.0),
+}  # fmt: skip
+"""Canonical values: usual, and in the anchors with something amiss."""
 
 
 def anchors(size: int, seed: int = 1) -> tuple[Timelines, AnchorTable]:
@@ -32,11 +37,11 @@ def anchors(size: int, seed: int = 1) -> tuple[Timelines, AnchorTable]:
     readings["patient"], readings["effective"], readings["origin"] = patient, effective, rows
     readings["part"] = -1
     people = [Patient(f"p{n}", "made-up", f"Patient/p{n}", START - 22_000 * DAY) for n in range(int(patient[-1]) + 1)]
-    low = chance.random(size) < 1 / 50
+    amiss = chance.random(size) < 1 / 50
     columns = {}
     for name, (usual, fallen) in USUAL.items():
-        value = np.where(low, fallen, usual) * (1 + 0.01 * chance.standard_normal(size))
-        doubt, none = 0.02 * value, np.zeros(size, np.uint64)
+        value = np.where(amiss, fallen, usual) * (1 + 0.01 * chance.standard_normal(size))
+        doubt, none = 0.02 * np.abs(value), np.zeros(size, np.uint64)
         known = np.full(size, Why.KNOWN, np.int8)
         columns[name] = Column(value, value, value, doubt, none, known, rows, np.full(size, -1))
     origins = Origins([f"o{row}" for row in rows], ["1"] * size)

@@ -20,6 +20,7 @@ from fhiro2.model import MICROSECONDS, Flag
 from fhiro2.packaged import rules_folder, ward_folder
 from fhiro2.settings import Settings
 from fhiro2.ward.scenario import BEDS, HOURS, START
+from tests.bench_judge import USUAL
 from tests.test_way import ward_timelines
 
 TODAY = date(2026, 12, 1)
@@ -181,3 +182,8 @@ def test_the_quiet_beds_raise_nothing_and_the_majority_little() -> None:
     assert {bed: count[bed] for bed in range(7, 13)} == dict.fromkeys(range(7, 13), 0)
     majority = sorted(count.values())[: len(BEDS) // 2 + 1]
     assert sum(majority) <= 0.3 * len(majority) * HOURS / 24
+
+
+def test_the_benchmark_has_a_column_for_every_quantity_of_the_pack() -> None:
+    asked = {name for rule in read_pack(rules_folder()).rules for name in rule.units}
+    assert asked <= set(USUAL)
