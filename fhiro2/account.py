@@ -11,7 +11,7 @@ from fhiro2.errors import Bucket, Reason, StopError
 
 @dataclass
 class Account:
-    """Counts over one run. ``reasons`` counts resources by (bucket, reason); ``parts`` components."""
+    """Counts over one run. ``reasons`` counts resources by bucket and reason, ``parts`` components, ``held`` patients."""
 
     buckets: Counter[Bucket] = field(default_factory=Counter)
     reasons: Counter[tuple[Bucket, Reason]] = field(default_factory=Counter)
@@ -19,6 +19,7 @@ class Account:
     derived: Counter[str] = field(default_factory=Counter)
     not_computable: Counter[tuple[str, str]] = field(default_factory=Counter)
     flags: Counter[str] = field(default_factory=Counter)
+    held: int = 0
     notices: list[str] = field(default_factory=list)
 
     def place(self, bucket: Bucket, reason: Reason | None, number: int = 1) -> None:
@@ -42,6 +43,7 @@ class Account:
             "derived": sum(self.derived.values()),
             "not_computable": sum(self.not_computable.values()),
             "flags_raised": sum(self.flags.values()),
+            "patients_held": self.held,
             "reasons": {
                 bucket.value: {
                     reason.value: count for (where, reason), count in sorted(self.reasons.items()) if where is bucket

@@ -90,7 +90,8 @@ def replay(
         show_account(console, account)
         show_derived(console, account)
         console.print(f"\nFlags for review: {account['flags_raised']}. Written to {out}.", highlight=False)
-    raise typer.Exit(1 if account["quarantined"] or account["parts_quarantined"] else 0)
+    look = account["quarantined"] or account["parts_quarantined"] or account["patients_held"]
+    raise typer.Exit(1 if look else 0)
 
 
 @app.command()

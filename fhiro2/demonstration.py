@@ -8,13 +8,15 @@ import numpy as np
 from rich.console import Console
 
 from fhiro2.catalogue import decimals_of
+from fhiro2.flags import Flag
 from fhiro2.judge import read_pack
-from fhiro2.model import Column, Flag, Outcome, Why
+from fhiro2.model import Column, Outcome, Why
 from fhiro2.packaged import rules_folder, ward_folder
 from fhiro2.read.ndjson import NdjsonSource
 from fhiro2.replay import replay
 from fhiro2.settings import Settings, read_mapping
-from fhiro2.terminal import moment_text, plain_table, show_account, show_derived, show_flags
+from fhiro2.terminal import plain_table, show_account, show_derived, show_flags
+from fhiro2.write.flag import moment_text
 
 PICTURE = (
     ("hb", "Hb g/dL"),

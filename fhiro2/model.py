@@ -14,6 +14,8 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
+from fhiro2.flags import Flag
+
 Floats = NDArray[np.float64]
 Integers = NDArray[np.integer[Any]]
 Flags = NDArray[np.uint64]
@@ -317,42 +319,14 @@ class Timelines:
     stop: int = 2**62
 
 
-@dataclass(frozen=True)
-class Evidence:
-    """One value as it stood when a flag was raised: ``reading`` is its row, or -1 for a derived value."""
-
-    name: str
-    value: float
-    uncertainty: float
-    unit: str
-    age: int
-    reading: int
-
-
-@dataclass(frozen=True)
-class Flag:
-    """One episode of one rule in one patient, as it stands at the end of the anchors seen."""
-
-    rule: str
-    rule_version: int
-    title: str
-    severity: str
-    patient: str
-    anchor: int
-    anchor_id: str
-    subject: str
-    raised: int
-    cleared: int | None
-    probability: float
-    message: str
-    cautions: tuple[str, ...]
-    evidence: tuple[Evidence, ...]
-
-
 @dataclass
 class Outcome:
-    """What one call of the core found: the anchor tables with derived columns, and the flag episodes."""
+    """What one call of the core found: the anchor tables with derived columns, and the flag episodes.
+
+    ``held`` are the keys of patients whose flags are withheld because the evaluators of flags disagree on them.
+    """
 
     timelines: Timelines
     tables: dict[str, AnchorTable]
     flags: list[Flag]
+    held: tuple[str, ...] = ()

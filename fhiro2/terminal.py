@@ -4,7 +4,6 @@ from __future__ import annotations
 
 from collections import Counter
 from collections.abc import Sequence
-from datetime import UTC, datetime
 from textwrap import shorten
 from typing import Any
 
@@ -16,8 +15,9 @@ from rich.text import Text
 from fhiro2.catalogue import DERIVED_BY_CODE, MEASURED_BY_NAME, title_of
 from fhiro2.census import Census, Prospect, advice, notices
 from fhiro2.errors import Bucket
-from fhiro2.model import MICROSECONDS, WHY_TEXT, Flag, Why
-from fhiro2.write.flag import evidence_text, probability_text
+from fhiro2.flags import Flag
+from fhiro2.model import WHY_TEXT, Why
+from fhiro2.write.flag import sections
 
 STROKES = {"info": "|", "warning": "||", "critical": "|||"}
 MOST_CODES = 40
@@ -38,11 +38,6 @@ _MEANING = {
     Bucket.QUARANTINED: "kept aside with a reason",
     Bucket.OUT_OF_SCOPE: "not what this program reads",
 }
-
-
-def moment_text(moment: int) -> str:
-    """A time in microseconds as 05-Mar-2026 14:05 UTC."""
-    return datetime.fromtimestamp(moment / MICROSECONDS, UTC).strftime("%d-%b-%Y %H:%M UTC")
 
 
 def plain_table(*columns: str, numbers: Sequence[int] = ()) -> Table:
@@ -91,22 +86,19 @@ def show_flags(console: Console, flags: Sequence[Flag]) -> None:
     """Each flag as a sentence with its evidence and cautions, in the words of its narrative."""
     console.print(f"\n[bold]Flags for review[/bold]: {len(flags)} episodes")
     for flag in flags:
-        state = "still standing" if flag.cleared is None else f"cleared {moment_text(flag.cleared)}"
         console.print(
             Text.assemble(
                 (f"\n{STROKES[flag.severity]:<3} {flag.title}", "bold"),
                 f" ({flag.severity}), {flag.patient.rpartition('/')[2]}",
             )
         )
-        for line in (
-            f"{flag.message}.",
-            f"Raised {moment_text(flag.raised)}, {state}.",
-            f"Probability that the limit is truly crossed: {probability_text(flag.probability)}.",
-            *(f"Evidence: {evidence_text(found)}." for found in flag.evidence),
-        ):
-            console.print(Padding(Text(line), (0, 0, 0, 4)))
-        for caution in flag.cautions:
-            console.print(Padding(Text(f"Caution: {caution}.", style="dim"), (0, 0, 0, 4)))
+        for title, lines in sections(flag):
+            style = "dim" if title == "Cautions" else ""
+            console.print(Padding(Text(f"{title}." if not lines else f"{title}:", style=style), (0, 0, 0, 4)))
+            for line in lines:
+                console.print(Padding(Text(f"{line}.", style=style), (0, 0, 0, 6)))
+        if flag.cleared is None:
+            console.print(Padding(Text("Still standing."), (0, 0, 0, 4)))
 
 
 def show_census(console: Console, found: Census) -> None:

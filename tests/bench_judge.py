@@ -9,13 +9,15 @@ from __future__ import annotations
 import sys
 import time
 from collections.abc import Callable
+from typing import get_args
 
 import numpy as np
 
 from fhiro2.judge import chain_of, judge, read_pack
-from fhiro2.judge.episode import findings
-from fhiro2.model import DAY, MINUTE, READING, AnchorTable, Column, Names, Origins, Patient, Timelines, Why
+from fhiro2.judge.finding import finding
+from fhiro2.model import DAY, MINUTE, READING, AnchorTable, Column, Floats, Names, Origins, Patient, Timelines, Why
 from fhiro2.packaged import rules_folder
+from fhiro2.settings import ContextFact
 
 PER_PATIENT = 100
 START = 1_772_344_800_000_000  # 2026-03-01T06:00:00Z
@@ -46,7 +48,8 @@ def anchors(size: int, seed: int = 1) -> tuple[Timelines, AnchorTable]:
         columns[name] = Column(value, value, value, doubt, none, known, rows, np.full(size, -1))
     origins = Origins([f"o{row}" for row in rows], ["1"] * size)
     timelines = Timelines(readings, people, [()] * len(people), Names(subjects=[""]), origins)
-    return timelines, AnchorTable("arterial", rows, readings["patient"].copy(), effective, effective, columns)
+    facts = {fact: np.full(size, -1, np.int8) for fact in get_args(ContextFact)}
+    return timelines, AnchorTable("arterial", rows, readings["patient"].copy(), effective, effective, columns, facts)
 
 
 def least_time(work: Callable[[], object], times: int = 3) -> float:
@@ -66,9 +69,13 @@ def main(size: int) -> None:
     chain = chain_of(pack.rules)
     column = table.columns["pao2"].value
     one = least_time(lambda: column < 60.0, 20)
-    found = {rule.id: findings(rule, timelines, table) for rule in pack.rules}
+
+    def findings() -> dict[str, Floats]:
+        return {rule.id: positive(finding(rule, timelines, table), rule.severity) for rule in pack.rules}
+
+    found = findings()
     stages: dict[str, Callable[[], object]] = {
-        "findings of all rules": lambda: [findings(rule, timelines, table) for rule in pack.rules],
+        "findings of all rules": findings,
         "chaining to flags": lambda: chain.raising(found),
         "judging, all of it": lambda: judge(pack, timelines, {"arterial": table}, {}),
     }

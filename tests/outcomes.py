@@ -5,14 +5,14 @@ from __future__ import annotations
 import numpy as np
 
 from fhiro2.catalogue import DERIVED
+from fhiro2.flags import Evidence, Flag, Turn, TurnKind
+from fhiro2.judge.turn import cited
 from fhiro2.model import (
     MINUTE,
     READING,
     AnchorTable,
     Caution,
     Column,
-    Evidence,
-    Flag,
     Names,
     Origins,
     Outcome,
@@ -123,23 +123,27 @@ def _table(
 def _flag(timelines: Timelines, row: int) -> Flag:
     patient = int(timelines.readings["patient"][row])
     raised = int(timelines.readings["effective"][row])
+    anchor = cited(timelines, row)
+    turn = Turn(
+        kind=TurnKind.RAISED,
+        at=raised,
+        anchor=anchor,
+        probability=0.97,
+        message="PaO2 7.1 kPa < 8.0 kPa & falling",
+        evidence=(
+            Evidence("pao2", 53.25, 2.2, "mm[Hg]", 0, anchor),
+            Evidence("hb", 8.1, 0.2, "g/dL", 12 * MINUTE, cited(timelines, row + 2)),
+            Evidence("oxygen-delivery", 412.0, 50.0, "mL/min", 0, cited(timelines, row, "oxygen-delivery")),
+        ),
+        axes=(("gas", "met", "PaO2"), ("carrier", "not assessable", "not known: carboxyhaemoglobin")),
+    )
+    closed = Turn(TurnKind.CLEARED, raised + 95 * MINUTE, cited(timelines, row), None, "", ())
     return Flag(
         rule="low-arterial-oxygen",
         rule_version=2,
         title="Low arterial oxygen",
         severity=("info", "warning", "critical")[patient % 3],
         patient=timelines.patients[patient].key,
-        anchor=row,
-        anchor_id=f"{timelines.origins.ids[row]}#0",
-        subject=timelines.names.subjects[patient],
-        raised=raised,
-        cleared=raised + 95 * MINUTE if patient % 2 else None,
-        probability=0.97,
-        message="PaO2 7.1 kPa < 8.0 kPa & falling",
         cautions=("not an alarm", "local policy decides"),
-        evidence=(
-            Evidence("pao2", 53.25, 2.2, "mm[Hg]", 0, row),
-            Evidence("hb", 8.1, 0.2, "g/dL", 12 * MINUTE, row + 2),
-            Evidence("oxygen-delivery", 412.0, 50.0, "mL/min", 0, -1),
-        ),
+        turns=(turn, closed) if patient % 2 else (turn,),
     )

@@ -18,11 +18,11 @@ from hypothesis import strategies as st
 
 from fhiro2.cli import evaluators
 from fhiro2.errors import StopError
-from fhiro2.judge import Pack, chain, check_pack, judge, read_pack
+from fhiro2.judge import Pack, Standing, chain, check_pack, judge, read_pack
 from fhiro2.judge.chain import Chain, ForwardChainer, fnv1a
 from fhiro2.judge.rulefile import MOST_NEEDED
 from fhiro2.packaged import rules_folder
-from tests.test_episode import LOW_HAEMOGLOBIN, LOW_OXYGEN, PACK, RULES, Point, adults, flags_of, laid_out
+from tests.test_episode import LOW_HAEMOGLOBIN, LOW_OXYGEN, PACK, RULES, Point, adults, laid_out
 
 ALIKE = ("294a136d-0909-4f2f-81aa-1fcbb871879f", "08510b35-6da4-4a47-bf2e-6e6d2aa726e8")
 SMALL = {"a": frozenset("b"), "b": frozenset[str](), "c": frozenset("ab")}
@@ -95,7 +95,8 @@ def test_anchors_grouped_by_their_set_get_the_flags_of_each(rules: int, anchors:
     values = np.where(chance.random((rules, anchors)) < 0.6, chance.random((rules, anchors)), np.nan)
     with pytest.MonkeyPatch.context() as patched:
         patched.setitem(sys.modules, "durable", None)
-        found = Chain(needs).raising(dict(zip(names, values, strict=True)))
+        found, torn = Chain(needs).raising(dict(zip(names, values, strict=True)))
+    assert not len(torn)
     for row, name in enumerate(names):
         for place in range(anchors):
             there = all(not np.isnan(values[names.index(one), place]) for one in (name, *needs[name]))
@@ -107,6 +108,7 @@ def test_hiding_the_library_gives_the_same_flags_and_says_so(monkeypatch: pytest
     monkeypatch.setitem(sys.modules, "durable", None)
     alone = Chain(SMALL)
     assert alone.evaluators == ("built-in",)
+    assert alone.remarks == {chain.ALONE}
     assert alone.flags(frozenset("abc")) == frozenset("abc")
     assert alone.flags(frozenset("ac")) == frozenset()
     assert "built-in one alone" in evaluators(alone.evaluators)
@@ -115,6 +117,7 @@ def test_hiding_the_library_gives_the_same_flags_and_says_so(monkeypatch: pytest
 @with_durable
 def test_with_the_library_two_evaluators_are_named() -> None:
     assert Chain(SMALL).evaluators == ("durable-rules 2.0.28", "built-in")
+    assert Chain(SMALL).remarks == frozenset()
     assert "durable-rules 2.0.28 and built-in, which must agree" in evaluators(Chain(SMALL).evaluators)
 
 
@@ -135,13 +138,21 @@ def test_a_wrong_evaluator_is_caught_at_load(monkeypatch: pytest.MonkeyPatch) ->
 
 
 @with_durable
-def test_a_disagreement_at_run_time_stops(monkeypatch: pytest.MonkeyPatch) -> None:
+def test_a_disagreement_at_run_time_holds_the_patient_and_no_other(monkeypatch: pytest.MonkeyPatch) -> None:
     pack = Pack((RULES[LOW_HAEMOGLOBIN], OXYGEN_NEEDS_BOTH), ("two.yaml", "one.yaml"), "")
-    assert flags_of([], pack=pack) == []
+    points = [Point(0, 0, {"pao2": 40.0}), Point(1, 0, BLOODLESS), Point(1, 30, BLOODLESS | {"pao2": 40.0})]
+    timelines, table = laid_out([*points, Point(2, 0, BLOODLESS), Point(2, 30, {"pao2": 40.0})], adults(3))
+    before, carried, held = judge(pack, timelines, {"arterial": table}, {})
+    assert held == ()
+    assert [flag.patient[-1] for flag in before] == ["1", "2", "1"]
     chain.chain_of(pack.rules).flags.cache_clear()  # type: ignore[attr-defined]
     monkeypatch.setattr(chain, "satisfied", careless)
-    with pytest.raises(StopError, match=f"disagree on {LOW_OXYGEN};"):
-        flags_of([Point(0, 0, {"pao2": 40.0})], pack=pack)
+    flags, after, held = judge(pack, timelines, {"arterial": table}, {("north\nPatient/p2", "else"): Standing()})
+    assert held == ("north\nPatient/p0", "north\nPatient/p2")
+    assert flags == [flag for flag in before if flag.patient.endswith("p1")]
+    assert after == {key: one for key, one in carried.items() if key[0].endswith("p1")} | {
+        ("north\nPatient/p2", "else"): Standing()
+    }
 
 
 # --- the fence -----------------------------------------------------------------------------------------------------
@@ -174,7 +185,7 @@ def test_two_patients_with_one_hash_never_share_memory() -> None:
     timelines, table = laid_out(points, adults(3))
     for patient, key in zip(timelines.patients, ALIKE, strict=False):
         patient.key = key
-    flags, _ = judge(CHAINED, timelines, {"arterial": table}, {})
+    flags, _, _ = judge(CHAINED, timelines, {"arterial": table}, {})
     third = timelines.patients[2].key
     assert sorted((flag.rule, flag.patient) for flag in flags) == sorted(
         [(LOW_HAEMOGLOBIN, ALIKE[1]), (LOW_HAEMOGLOBIN, third), (LOW_OXYGEN, third)]

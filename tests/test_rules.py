@@ -13,10 +13,11 @@ import pytest
 from fhiro2 import packaged
 from fhiro2.assess import assess
 from fhiro2.errors import StopError
+from fhiro2.flags import Flag
 from fhiro2.judge import Rule, check_pack, read_pack
 from fhiro2.judge.cases import failure
 from fhiro2.judge.rulefile import Case
-from fhiro2.model import MICROSECONDS, Flag
+from fhiro2.model import MICROSECONDS
 from fhiro2.packaged import rules_folder, ward_folder
 from fhiro2.settings import Settings
 from fhiro2.ward.scenario import BEDS, HOURS, START
@@ -152,7 +153,7 @@ def hour(microseconds: int) -> float:
 def test_the_bed_with_carbon_monoxide_is_raised_on_arrival_and_cleared() -> None:
     """COHb 31 % on arrival, falling to 4 % by hour 9.4; the rule's own limits are 10 and 8 %."""
     (flag,) = ward_flags()["raised-carboxyhaemoglobin", 1]
-    (evidence,) = flag.evidence
+    (evidence,) = flag.turns[0].evidence
     assert 0.28 <= evidence.value <= 0.32
     assert hour(flag.raised) < 1
     assert flag.cleared is not None
@@ -162,7 +163,7 @@ def test_the_bed_with_carbon_monoxide_is_raised_on_arrival_and_cleared() -> None
 def test_the_bed_with_low_output_is_raised_by_its_extraction() -> None:
     """Hb 11.6, 97.4 and 51 %, COHb 1.3, MetHb 0.8 %, 98 and 30.3 mmHg: by definition (15.67 - 8.14) / 15.67 = 0.48."""
     flag = ward_flags()["high-extraction-flow-or-demand", 3][0]
-    evidence = {one.name: one.value for one in flag.evidence}
+    evidence = {one.name: one.value for one in flag.turns[0].evidence}
     assert evidence["oxygen-extraction-ratio"] == pytest.approx(0.48, abs=0.04)
     assert evidence["hb"] == pytest.approx(11.6, abs=0.6)
     assert hour(flag.raised) < 28

@@ -19,8 +19,9 @@ from hypothesis import strategies as st
 
 from fhiro2.assess import assess
 from fhiro2.bulk.intake import take_in
+from fhiro2.flags import Flag
 from fhiro2.judge import Carried, Pack, read_pack
-from fhiro2.model import Flag, Outcome, Timelines
+from fhiro2.model import Outcome, Timelines
 from fhiro2.packaged import rules_folder, ward_folder
 from fhiro2.read.ndjson import NdjsonSource
 from fhiro2.replay import COMPARED, replay

@@ -25,6 +25,7 @@ import fhiro2.write.values
 from fhiro2.catalogue import BASES, DERIVED
 from fhiro2.errors import StopError
 from fhiro2.fhir.resources import date_times, instants, shape, text_slot
+from fhiro2.flags import Turn, TurnKind
 from fhiro2.model import (
     CAUTION_TEXT,
     HOUR,
@@ -32,7 +33,6 @@ from fhiro2.model import (
     READING,
     AnchorTable,
     Caution,
-    Evidence,
     Names,
     Origins,
     Outcome,
@@ -451,6 +451,11 @@ def flag(folder: Path, patient: int = 0, **given: object) -> tuple[dict[str, Any
     return json.loads(line), json.loads(lines["provenance.ndjson"][-1]), found
 
 
+def turns(**given: object) -> tuple[Turn, ...]:
+    """The turn that raised the flag of the first patient, with what is given changed."""
+    return (dataclasses.replace(outcome(3, 2).flags[0].turns[0], **given),)  # type: ignore[arg-type]
+
+
 def paragraphs(resource: dict[str, Any]) -> list[str]:
     """The texts that a reader of the narrative sees; a text that became markup would not be among them."""
     root = ElementTree.fromstring(resource["text"]["div"])  # noqa: S314 - our own output
@@ -462,7 +467,7 @@ def test_a_flag_says_what_how_urgent_since_when_and_from_what(tmp_path: Path) ->
     found, origin, batch = flag(tmp_path)
     space = uuid.uuid5(uuid.NAMESPACE_URL, BASE)
     raised = batch.flags[0]
-    stem = f"north\nPatient/p0\n{raised.anchor_id}\n"
+    stem = f"north\nPatient/p0\n{raised.anchor.anchor_id}\n"
     delivery = f"Observation/{uuid.uuid5(space, stem + 'oxygen-delivery')}"
     assert found["id"] == str(uuid.uuid5(space, stem + "low-arterial-oxygen"))
     assert found["identifier"] == [{"system": f"{BASE}/identifier/flag", "value": found["id"]}]
@@ -497,7 +502,7 @@ def test_severity_is_the_priority_of_the_flag(severity: str, code: str, tmp_path
 
 
 def test_a_cleared_flag_is_inactive_and_has_an_end(tmp_path: Path) -> None:
-    found, _, _ = flag(tmp_path, raised=START, cleared=START + HOUR)
+    found, _, _ = flag(tmp_path, turns=turns(at=START) + turns(kind=TurnKind.CLEARED, at=START + HOUR, message=""))
     assert found["status"] == "inactive"
     assert found["period"] == {"start": "2024-03-01T00:00:00Z", "end": "2024-03-01T01:00:00Z"}
 
@@ -515,18 +520,19 @@ def test_the_narrative_shows_message_probability_evidence_and_cautions(tmp_path:
     ("probability", "words"), [(0.999, "more than 0.99"), (0.5, "0.50"), (0.001, "less than 0.01")]
 )
 def test_a_probability_is_never_shown_as_certain(probability: float, words: str, tmp_path: Path) -> None:
-    found, _, _ = flag(tmp_path, probability=probability)
+    found, _, _ = flag(tmp_path, turns=turns(probability=probability))
     assert any(text.endswith(f"crossed: {words}") for text in paragraphs(found))
 
 
 def test_evidence_known_only_as_a_bound_says_so(tmp_path: Path) -> None:
-    found, _, _ = flag(tmp_path, evidence=(Evidence("pao2", float("nan"), float("nan"), "mm[Hg]", 0, 0),))
+    bound = dataclasses.replace(turns()[0].evidence[0], value=None, uncertainty=None)
+    found, _, _ = flag(tmp_path, turns=turns(evidence=(bound,)))
     assert "PaO2: known only as a bound, at the draw" in paragraphs(found)
 
 
 def test_hostile_texts_are_shown_inert(tmp_path: Path) -> None:
     hostile = "<script>x</script>\u202e\u200b\x1b[31m\x00\nnext"
-    found, _, _ = flag(tmp_path, message=hostile, title=hostile, cautions=(hostile,))
+    found, _, _ = flag(tmp_path, turns=turns(message=hostile), title=hostile, cautions=(hostile,))
     clean = "<script>x</script>\ufffd\ufffd\ufffd[31m\ufffd next"
     assert paragraphs(found)[0] == paragraphs(found)[-1] == clean
     assert found["code"]["text"] == clean
@@ -539,15 +545,33 @@ def test_a_long_text_is_cut_with_a_mark() -> None:
     assert cut.endswith("…")
 
 
-@pytest.mark.parametrize("change", [{"anchor": 1}, {"anchor": 10_000}, {"anchor_id": "elsewhere"}])
-def test_a_flag_whose_rows_are_not_of_this_batch_stops_the_run(change: dict[str, object], tmp_path: Path) -> None:
-    with pytest.raises(StopError, match="not in this batch"):
-        flag(tmp_path, **change)
+def test_every_turn_is_told_with_its_evidence_and_its_sources(tmp_path: Path) -> None:
+    raised = turns(at=START)[0]
+    older = dataclasses.replace(
+        raised.evidence[1], value=7.5, cited=dataclasses.replace(raised.anchor, observation="x1")
+    )
+    worse = turns(kind=TurnKind.WORSENED, at=START + HOUR, message="PaO2 4.9 kPa", evidence=(older,), probability=0.6)
+    closed = turns(kind=TurnKind.CLEARED, at=START + 2 * HOUR, message="", evidence=raised.evidence[:1])
+    found, origin, _ = flag(tmp_path, turns=(raised, *worse, *closed), severity="critical")
+    shown = paragraphs(found)
+    assert shown[:2] == ["PaO2 4.9 kPa", "Probability that the limit is truly crossed: 0.60"]
+    at = shown.index("Course")
+    assert shown[at + 1 : at + 4] == [
+        "raised 01-Mar-2024 00:00 UTC", "worsened 01-Mar-2024 01:00 UTC", "cleared 01-Mar-2024 02:00 UTC"
+    ]  # fmt: skip
+    assert shown[shown.index("Evidence") + 1] == "haemoglobin: 7.5 ± 0.20 g/dL, 12 min before"
+    assert shown[shown.index("Evidence when raised") + 2] == "haemoglobin: 8.1 ± 0.20 g/dL, 12 min before"
+    assert shown[shown.index("Evidence when cleared") + 1] == "PaO2: 53.2 ± 2.20 mmHg, at the draw"
+    assert shown[shown.index("Oxygen chain") + 1] == "gas: met (PaO2)"
+    assert "Observation/x1" in [entry["what"]["reference"] for entry in origin["entity"]]
+    assert found["status"] == "inactive"
 
 
 def test_flags_are_ordered_by_patient_then_time(tmp_path: Path) -> None:
     found = outcome(4, 2)
-    late = dataclasses.replace(found.flags[0], raised=found.flags[0].raised + HOUR, rule="later")
+    first = found.flags[0]
+    later = tuple(dataclasses.replace(turn, at=turn.at + HOUR) for turn in first.turns)
+    late = dataclasses.replace(first, turns=later, rule="later")
     found.flags = [*found.flags[::-1], late]
     lines = written(found, tmp_path)["flags.ndjson"]
     keys = [

@@ -26,6 +26,11 @@ def tally(account: Account, outcome: Outcome) -> None:
                     account.not_computable[row.code, why] += number
     for flag in outcome.flags:
         account.flags[flag.rule] += 1
+    account.held += len(outcome.held)
+    account.notices += [
+        f"{patient}: flags withheld, since the two evaluators of flags disagree; report this"
+        for patient in outcome.held
+    ]
 
 
 def absences(column: Column) -> list[tuple[str, int]]:

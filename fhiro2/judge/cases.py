@@ -6,15 +6,19 @@ from collections.abc import Sequence
 from dataclasses import dataclass
 from datetime import UTC, date, datetime
 from pathlib import Path
+from typing import get_args
 
 import numpy as np
 
 from fhiro2.catalogue import DERIVED_BY_CODE
+from fhiro2.flags import TurnKind
 from fhiro2.judge.chain import Chain, chain_of
-from fhiro2.judge.condition import UNKNOWN, AllOf, canonical, evaluate
-from fhiro2.judge.episode import YEAR, findings, fold
-from fhiro2.judge.rulefile import Case, Given, Rule, read_pack
+from fhiro2.judge.condition import UNKNOWN, Truth, canonical, conjunction
+from fhiro2.judge.finding import NAMED_BY, YEAR, finding
+from fhiro2.judge.judging import judged
+from fhiro2.judge.rulefile import Case, Given, Moment, Rule, read_pack
 from fhiro2.model import MICROSECONDS, MINUTE, READING, AnchorTable, Column, Names, Origins, Patient, Timelines, Why
+from fhiro2.settings import ContextFact
 
 START = int(datetime(2000, 1, 1, tzinfo=UTC).timestamp()) * MICROSECONDS
 """The time of ``after_minutes: 0``."""
@@ -75,34 +79,35 @@ def failure(rule: Rule, case: Case, needed: Sequence[Rule] = (), chain: Chain | 
         return ""
     expected = case.expect + (f" {case.message!r}" if case.message else "")
     got = found + (f" {message!r}" if message else "") + (f" (not known: {', '.join(missing)})" if missing else "")
-    used = "; ".join(
-        f"+{moment.after_minutes} min "
-        + ", ".join(f"{name} {one.value:g} {one.unit} (u {one.uncertainty:g})" for name, one in moment.values.items())
-        for moment in case.given
-    )
+    used = "; ".join(f"+{moment.after_minutes} min {_said(moment)}" for moment in case.given)
     age = case.given[0].age_years
     years = "unknown" if age is None else f"{age:g}"
     return f"case {case.name!r}: expected {expected}, got {got}; values used: age {years}; {used}"
 
 
+def _said(moment: Moment) -> str:
+    """The values and facts of one moment in a line."""
+    values = [f"{name} {one.value:g} {one.unit} (u {one.uncertainty:g})" for name, one in moment.values.items()]
+    facts = [f"{fact} {'yes' if there else 'no'}" for fact, there in moment.facts.items()]
+    return ", ".join([*values, *facts])
+
+
 def _outcome(rules: Sequence[Rule], case: Case, chain: Chain) -> tuple[str, str, list[str]]:
     """What the case finds for the first of ``rules``, which needs the others.
 
-    That is: in a word, the message of the flag that stands, and which quantities were missing at the end.
+    That is: in a word, the message of the flag that stands, and what was not known at the end.
     """
     rule = rules[0]
     timelines, table = _laid_out(rules, case)
-    raising = chain.raising({one.id: findings(one, timelines, table) for one in rules})
-    flags, opened = fold(rule, timelines, table, raising[rule.id], {})
-    if opened:
-        return "flag", next(iter(opened.values())).flag.message, []
+    flags = [flag for flag in judged(rules, chain, timelines, table, {})[0] if flag.rule == rule.id]
     if flags:
-        return "cleared", "", []
-    if case.given[0].age_years is None:
-        return "unknown", "", ["age"]
-    found = evaluate(AllOf(tuple(one.raises for one in rules)), table.columns)
-    if found.truth[-1] == UNKNOWN:
-        return "unknown", "", [name for name, where in found.missing.items() if where[-1]]
+        latest = flags[-1].latest
+        if flags[-1].cleared is not None:
+            return "cleared", "", []
+        return ("worsened" if latest.kind is TurnKind.WORSENED else "flag"), latest.message, []
+    asked = conjunction([finding(one, timelines, table) for one in rules])
+    if asked.truth[-1] == UNKNOWN:
+        return "unknown", "", [name for name, where in asked.missing.items() if where[-1]]
     return "none", "", []
 
 
@@ -113,6 +118,7 @@ def _laid_out(rules: Sequence[Rule], case: Case) -> tuple[Timelines, AnchorTable
     readings = np.zeros(len(rows), READING)
     readings["effective"] = readings["known"] = effective
     readings["origin"], readings["part"] = rows, -1
+    readings["evidence"] = [sum(NAMED_BY[one] for one in moment.blood_named_by) for moment in case.given]
     age = case.given[0].age_years
     born = None if age is None else int(effective[0]) - round(age * YEAR)
     people = [Patient("case", "case", "Patient/case", born)]
@@ -120,7 +126,13 @@ def _laid_out(rules: Sequence[Rule], case: Case) -> tuple[Timelines, AnchorTable
     timelines = Timelines(readings, people, [()], Names(subjects=["Patient/case"]), origins)
     names = {name: None for rule in rules for name in rule.units}
     columns = {name: _column(name, [moment.values.get(name) for moment in case.given]) for name in names}
-    return timelines, AnchorTable(rules[0].at, rows, readings["patient"], effective, effective, columns)
+    facts = {fact: _fact(fact, case.given) for fact in get_args(ContextFact)}
+    return timelines, AnchorTable(rules[0].at, rows, readings["patient"], effective, effective, columns, facts)
+
+
+def _fact(fact: ContextFact, given: Sequence[Moment]) -> Truth:
+    """A context fact as stated at each moment; what is not stated is unknown."""
+    return np.array([moment.facts.get(fact, UNKNOWN) for moment in given], dtype=np.int8)
 
 
 def _column(name: str, given: Sequence[Given | None]) -> Column:

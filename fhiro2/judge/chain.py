@@ -18,6 +18,7 @@ from threading import Lock
 from typing import Any
 
 import numpy as np
+from numpy.typing import NDArray
 
 from fhiro2.errors import StopError
 from fhiro2.judge.rulefile import MOST_NEEDED, Rule
@@ -31,7 +32,14 @@ SETS_KEPT = 4096
 SESSION = "session"
 CATCH_ALL = "any finding"
 
+Places = NDArray[np.intp]
+ALONE = "flags chained by the built-in evaluator alone: there was no second one to agree"
+
 Needs = Mapping[str, frozenset[str]]
+
+
+class DisagreementError(StopError):
+    """The two evaluators give different flags for the same findings."""
 
 
 class Chain:
@@ -65,13 +73,21 @@ class Chain:
                 raise ValueError("a finding that is no rule of the pack; pass ids of rules")
         flags = satisfied(self._needs, findings)
         if self._forward and self._forward.flags(findings) != flags:
-            raise StopError(
+            raise DisagreementError(
                 f"the two evaluators disagree on {', '.join(sorted(findings))}; the pack is not to be used: report it"
             )
         return flags
 
-    def raising(self, positive: Mapping[str, Floats]) -> dict[str, Floats]:
-        """The findings of rules at the same anchors, each NaN where not positive, without those that raise no flag."""
+    @property
+    def remarks(self) -> frozenset[str]:
+        """What every flag of this chain says of how it came about."""
+        return frozenset() if self._forward else frozenset({ALONE})
+
+    def raising(self, positive: Mapping[str, Floats]) -> tuple[dict[str, Floats], Places]:
+        """The findings of rules at the same anchors, each NaN where not positive, without those that raise no flag.
+
+        Beside them the anchors on whose findings the evaluators disagree: nothing is raised there.
+        """
         names = np.array(list(positive))
         marks = ~np.isnan(np.stack(list(positive.values())))
         some = np.flatnonzero(marks.any(axis=0))
@@ -79,11 +95,18 @@ class Chain:
         first = kind[:0]
         for byte in np.packbits(marks, axis=0):
             _, first, kind = np.unique(256 * kind + byte, return_index=True, return_inverse=True)
-        flagged = [self.flags(frozenset(names[marks[:, place]].tolist())) for place in first]
-        return {
-            name: _only(values, some[np.array([name in flags for flags in flagged], dtype=bool)[kind]])
+        flagged = [self._agreed(frozenset(names[marks[:, place]].tolist())) for place in first]
+        raised = {
+            name: _only(values, some[np.array([name in (flags or ()) for flags in flagged], dtype=bool)[kind]])
             for name, values in positive.items()
         }
+        return raised, some[np.array([flags is None for flags in flagged], dtype=bool)[kind]]
+
+    def _agreed(self, findings: frozenset[str]) -> frozenset[str] | None:
+        try:
+            return self.flags(findings)
+        except DisagreementError:
+            return None
 
 
 def chain_of(rules: Sequence[Rule]) -> Chain:
@@ -194,7 +217,7 @@ def _check_distinct(names: Sequence[str]) -> None:
             raise StopError(f"the ids {other} and {name} have the same 32-bit hash; rename one of the rules")
 
 
-def _only(values: Floats, places: np.ndarray[Any, np.dtype[np.int64]]) -> Floats:
+def _only(values: Floats, places: Places) -> Floats:
     kept = np.full_like(values, np.nan)
     kept[places] = values[places]
     return kept

@@ -134,7 +134,12 @@ def evaluate(condition: Condition, columns: Mapping[str, Column]) -> Finding:
         case AnyOf():
             return _grouped([evaluate(part, columns) for part in condition.parts], TRUE, np.fmax)
         case AllOf():
-            return _grouped([evaluate(part, columns) for part in condition.parts], FALSE, np.fmin)
+            return conjunction([evaluate(part, columns) for part in condition.parts])
+
+
+def conjunction(parts: Sequence[Finding]) -> Finding:
+    """All parts at once, as ``evaluate`` takes an ``all``."""
+    return _grouped(parts, FALSE, np.fmin)
 
 
 def _compared(condition: Comparison, column: Column) -> Finding:

@@ -1,57 +1,62 @@
-"""Episodes: a rule's findings folded over a patient's anchors, from raised to cleared, each a flag with evidence."""
+"""Episodes: a rule's findings folded over a patient's anchors, from raised to cleared; each is one flag."""
 
 from __future__ import annotations
 
-import math
-from collections.abc import Mapping
 from dataclasses import dataclass, replace
-from datetime import UTC, datetime
 
 import numpy as np
 
-from fhiro2.catalogue import decimals_of, unit_of
-from fhiro2.judge.condition import TRUE, canonical, evaluate, quantities
-from fhiro2.judge.rulefile import TIME, Rule
-from fhiro2.model import (
-    CAUTION_TEXT,
-    DAY,
-    MICROSECONDS,
-    AnchorTable,
-    Caution,
-    Evidence,
-    Flag,
-    Floats,
-    Integers,
-    Timelines,
-    Truths,
-    Why,
-)
+from fhiro2.flags import Flag, Turn, TurnKind
+from fhiro2.judge.axis import axis_states
+from fhiro2.judge.condition import TRUE, evaluate
+from fhiro2.judge.finding import Run, lasting, outside, positive
+from fhiro2.judge.rulefile import Rule
+from fhiro2.judge.turn import doubts, turn
+from fhiro2.model import MINUTE, AnchorTable, Floats, Integers, Timelines, Truths
 
-YEAR = 365.25 * DAY
-
-RAISED_FROM: dict[str, float] = {"info": 0.95, "warning": 0.5, "critical": 0.5}
-"""The least probability at which a true finding raises a flag, by severity. Design choice."""
+Key = tuple[str, str]
 
 
 @dataclass(frozen=True)
-class OpenEpisode:
-    """An episode that is not cleared yet, with its flag as it was raised."""
+class Standing:
+    """What is carried of one rule in one patient: its last episode, and the run of findings towards the next.
 
-    flag: Flag
-
-
-Carried = dict[tuple[str, str], OpenEpisode]
-"""The open episodes by patient key and rule id."""
-
-
-def findings(rule: Rule, timelines: Timelines, table: AnchorTable) -> Floats:
-    """The probability of the rule's positive findings at the anchors of ``table``; NaN where there is none.
-
-    Positive is a condition that is true with enough probability in a patient within the rule's scope.
+    A cleared episode is carried as long as it may go on after a quiet time.
     """
-    found = evaluate(rule.raises, table.columns)
-    positive = in_scope(rule, timelines, table) & (found.truth == TRUE)
-    return np.where(positive & (found.probability >= RAISED_FROM[rule.severity]), found.probability, np.nan)
+
+    flag: Flag | None = None
+    run: Run | None = None
+
+    @property
+    def is_open(self) -> bool:
+        """Whether an episode stands."""
+        return self.flag is not None and self.flag.cleared is None
+
+
+Carried = dict[Key, Standing]
+"""What is carried from anchors to later ones, by patient key and rule id."""
+
+_NOTHING = Standing()
+_RAISING, _WORSE, _CLEARING = 1, 2, 3
+
+
+def sustained(
+    rule: Rule, timelines: Timelines, table: AnchorTable, found: Floats, known: Truths, carried: Carried
+) -> tuple[Floats, Carried]:
+    """Positive findings that have lasted as long as ``rule`` asks, and what is carried with the runs as they stand."""
+    if rule.lasting is None:
+        return found, carried
+    keys = [(patient.key, rule.id) for patient in timelines.patients]
+    before = {
+        number: standing.run
+        for number, key in enumerate(keys)
+        if (standing := carried.get(key, _NOTHING)).run is not None
+    }
+    result, runs = lasting(rule.lasting, table, found, known, before)
+    after = dict(carried)
+    for number, run in runs.items():
+        _keep(after, keys[number], replace(after.get(keys[number], _NOTHING), run=run), rule)
+    return result, after
 
 
 def fold(
@@ -59,96 +64,84 @@ def fold(
     timelines: Timelines,
     table: AnchorTable,
     probability: Floats,
-    carried: Mapping[tuple[str, str], OpenEpisode],
+    carried: Carried,
+    remarks: frozenset[str] = frozenset(),
 ) -> tuple[list[Flag], Carried]:
-    """The flags that ``rule`` raises or clears at the anchors of ``table``, and the episodes open after them.
+    """The flags that ``rule`` raises or changes at the anchors of ``table``, and what is carried after them.
 
     Raised where ``probability`` is a number and no episode is open; cleared where it is NaN and the rule's clearing
-    condition is true. What is unknown changes nothing.
+    condition is true or the patient has left the rule's scope. What is unknown changes nothing. ``remarks`` are
+    cautions that every flag carries.
     """
-    raising = ~np.isnan(probability)
-    clearing = ~raising & in_scope(rule, timelines, table) & (evaluate(rule.clears, table.columns).truth == TRUE)
-    opened, flags = dict(carried), []
-    for place in _turns(table.patient, raising, clearing).tolist():
+    states = _states(rule, timelines, table, probability)
+    places = _turns(table.patient, states)
+    axes = axis_states(table, places)
+    changed: dict[tuple[str, str], Flag] = {}
+    after = dict(carried)
+    for place, links in zip(places.tolist(), axes, strict=True):
         key = (timelines.patients[int(table.patient[place])].key, rule.id)
-        if raising[place] and key not in opened:
-            opened[key] = OpenEpisode(_flag(rule, timelines, table, place, float(probability[place])))
-        elif clearing[place] and key in opened:
-            flags.append(replace(opened.pop(key).flag, cleared=int(table.effective[place])))
-    flags += [episode.flag for key, episode in opened.items() if carried.get(key) is not episode]
-    return flags, opened
+        before = after.get(key, _NOTHING)
+        flag = before.flag
+        for kind in _kinds(rule, before, int(states[place]), int(table.effective[place])):
+            one = turn(kind, rule, timelines, table, place, float(probability[place]), links)
+            cautions = {*rule.cautions, *doubts(rule, table, place), *remarks}
+            flag = _turned(rule, flag, one, cautions, key[0])
+        if flag is not None and flag is not before.flag:
+            changed[key[0], flag.anchor.anchor_id] = flag
+            _keep(after, key, replace(before, flag=flag), rule)
+    return list(changed.values()), after
 
 
-def in_scope(rule: Rule, timelines: Timelines, table: AnchorTable) -> Truths:
-    """Where the patient's age at the anchor is known and within the rule's scope."""
-    born = np.array([np.nan if one.born is None else one.born for one in timelines.patients], dtype=np.float64)
-    result: Truths = (table.effective - born[table.patient]) / YEAR >= rule.scope.age_years.least
-    return result
+def _states(rule: Rule, timelines: Timelines, table: AnchorTable, probability: Floats) -> Integers:
+    """What every anchor asks for: raising, raising what is worse, clearing, or nothing (0)."""
+    raising = ~np.isnan(probability)
+    cleared = evaluate(rule.clears, table.columns).truth == TRUE
+    states = np.where(raising, _RAISING, np.where(cleared | outside(rule, timelines, table), _CLEARING, 0))
+    if rule.worse is not None and rule.worsens is not None:
+        worse = positive(evaluate(rule.worsens, table.columns), rule.worse.severity)
+        states[raising & ~np.isnan(worse)] = _WORSE
+    return states
 
 
-def _turns(patient: Integers, raising: Truths, clearing: Truths) -> Integers:
-    """The anchors that can change an episode: of equal findings in a row of one patient, the first."""
-    places = np.flatnonzero(raising | clearing)
-    state, owner = raising[places], patient[places]
+def _turns(patient: Integers, states: Integers) -> Integers:
+    """The anchors that can change an episode: of equal ones in a row of one patient, the first."""
+    places = np.flatnonzero(states)
+    state, owner = states[places], patient[places]
     turns = np.ones(len(places), dtype=bool)
     turns[1:] = (state[1:] != state[:-1]) | (owner[1:] != owner[:-1])
     return places[turns]
 
 
-def _flag(rule: Rule, timelines: Timelines, table: AnchorTable, place: int, probability: float) -> Flag:
-    anchor = int(table.reading[place])
-    row = timelines.readings[anchor]
-    observation, part = timelines.origins.ids[int(row["origin"])], int(row["part"])
-    known = [name for name in quantities(rule.raises) if table.columns[name].why[place] == Why.KNOWN]
-    bits = np.bitwise_or.reduce([table.columns[name].cautions[place] for name in known])
-    doubts = [CAUTION_TEXT[one] for one in Caution(int(bits))]
-    return Flag(
-        rule=rule.id,
-        rule_version=rule.version,
-        title=rule.title,
-        severity=rule.severity,
-        patient=timelines.patients[int(table.patient[place])].key,
-        anchor=anchor,
-        anchor_id=observation if part < 0 else f"{observation}#{part}",
-        subject=timelines.names.subjects[int(row["subject"])],
-        raised=int(table.effective[place]),
-        cleared=None,
-        probability=probability,
-        message=_message(rule, table, place),
-        cautions=tuple(sorted({*rule.cautions, *doubts})),
-        evidence=tuple(_evidence(name, timelines, table, place) for name in known),
-    )
+def _kinds(rule: Rule, before: Standing, state: int, now: int) -> list[TurnKind]:
+    """The turns that an episode takes where an anchor asks for ``state``."""
+    if state == _CLEARING:
+        return [TurnKind.CLEARED] if before.is_open else []
+    kinds, flag = [], before.flag
+    if not before.is_open:
+        goes_on = flag is not None and flag.cleared is not None and now - flag.cleared < rule.quiet_minutes * MINUTE
+        kinds.append(TurnKind.RAISED_AGAIN if goes_on else TurnKind.RAISED)
+        flag = flag if goes_on else None
+    known_worse = flag is not None and any(one.kind is TurnKind.WORSENED for one in flag.turns)
+    if state == _WORSE and not known_worse:
+        kinds.append(TurnKind.WORSENED)
+    return kinds
 
 
-def _evidence(name: str, timelines: Timelines, table: AnchorTable, place: int) -> Evidence:
-    column = table.columns[name]
-    reading = int(column.source[place])
-    age = int(table.effective[place]) - int(timelines.readings["effective"][reading]) if reading >= 0 else 0
-    return Evidence(name, float(column.value[place]), float(column.uncertainty[place]), unit_of(name), age, reading)
+def _turned(rule: Rule, flag: Flag | None, one: Turn, cautions: set[str], patient: str) -> Flag:
+    """The flag after one more turn; a new one where it is raised."""
+    if one.kind is TurnKind.RAISED or flag is None:
+        return Flag(rule.id, rule.version, rule.title, rule.severity, patient, tuple(sorted(cautions)), (one,))
+    turns = (*flag.turns, one)
+    if one.kind is TurnKind.CLEARED:
+        return replace(flag, turns=turns)
+    severity: str = rule.worse.severity if rule.worse and one.kind is TurnKind.WORSENED else flag.severity
+    return replace(flag, severity=severity, cautions=tuple(sorted({*flag.cautions, *cautions})), turns=turns)
 
 
-def _message(rule: Rule, table: AnchorTable, place: int) -> str:
-    moment = datetime.fromtimestamp(int(table.effective[place]) // MICROSECONDS, UTC)
-    words = {name: _words(rule, table, place, name) for name in quantities(rule.raises)}
-    return rule.message.format_map({**words, TIME: f"{moment:%Y-%m-%d %H:%M} UTC"})
-
-
-def _words(rule: Rule, table: AnchorTable, place: int, name: str) -> str:
-    """A value in the unit of the rule, with no fewer decimals than the catalogue declares for the quantity."""
-    column, unit = table.columns[name], rule.units[name]
-    scale = canonical(name, unit)
-    decimals = max(0, math.ceil(round(decimals_of(name) + math.log10(scale.factor), 6)))
-    label = "" if unit == "1" else f" {unit.replace('[', '').replace(']', '')}"
-
-    def shown(number: float) -> str:
-        rounded = round((number - scale.offset) / scale.factor, decimals) + 0.0
-        return f"{rounded:.{decimals}f}"
-
-    if column.why[place] != Why.KNOWN:
-        return "not known"
-    low, high = float(column.low[place]), float(column.high[place])
-    if not low < high:
-        return shown(float(column.value[place])) + label
-    if math.isinf(high):
-        return f"at least {shown(low)}{label}"
-    return f"at most {shown(high)}{label}" if low <= 0 else f"{shown(low)} to {shown(high)}{label}"
+def _keep(carried: Carried, key: Key, standing: Standing, rule: Rule) -> None:
+    """Carry only what a later anchor can still change."""
+    flag = standing.flag if standing.is_open or rule.quiet_minutes else None
+    if flag is None and standing.run is None:
+        carried.pop(key, None)
+    else:
+        carried[key] = Standing(flag, standing.run)

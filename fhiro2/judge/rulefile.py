@@ -20,8 +20,10 @@ from fhiro2.catalogue import DERIVED_BY_CODE, INPUT_BY_NAME
 from fhiro2.documents import Marks, parse, validated
 from fhiro2.errors import SkipError, StopError
 from fhiro2.judge.condition import AllOf, AnyOf, Condition, Not, Operator, canonical, comparison, quantities
+from fhiro2.settings import ContextFact
 
 TIME = "time"
+SEVERITIES = ("info", "warning", "critical")
 MOST_NEEDED = 3
 """How many other rules a flag may need: joins of five patterns were seen to be unsafe in one evaluator of flags."""
 Place = tuple[str | int, ...]
@@ -96,15 +98,45 @@ class Clause(_Frozen):
 
 
 class AgeLimit(_Frozen):
-    """Completed years of life from which a rule applies."""
+    """Completed years of life from which a rule applies, and up to which (None: without end)."""
 
     least: int = Field(ge=0, le=130)
+    most: int | None = Field(None, ge=0, le=130)
+
+    @model_validator(mode="after")
+    def _is_a_range(self) -> Self:
+        if self.most is not None and self.most < self.least:
+            raise ValueError("most is less than least; exchange them")
+        return self
 
 
 class Scope(_Frozen):
-    """Whom a rule speaks of; a patient of unknown age is not evaluated."""
+    """Whom a rule speaks of; whatever of it is not known makes the finding unknown, but for ``unless``.
+
+    ``with`` and ``without`` are context facts that must be stated, as present or as absent. ``unless`` are facts that
+    leave a patient out where they are stated; where nobody spoke of them the flag says so. ``blood_named_by`` asks
+    that specimen or body site, not the code alone, name the kind of blood.
+    """
 
     age_years: AgeLimit
+    with_facts: Some[ContextFact] = Field((), alias="with")
+    without: Some[ContextFact] = ()
+    unless: Some[ContextFact] = ()
+    blood_named_by: Some[Literal["specimen", "body-site"]] = ()
+
+
+class Lasting(_Frozen):
+    """How long a rule must have found what it seeks, at samples that are not too far from each other."""
+
+    minutes: int = Field(ge=1)
+    at_most_apart_minutes: int = Field(ge=1)
+
+
+class Worse(_Frozen):
+    """When an episode is worse, and the severity that it then has until it ends."""
+
+    severity: Literal["warning", "critical"]
+    when: Clause
 
 
 class Source(_Frozen):
@@ -124,13 +156,15 @@ class Given(_Frozen):
 
 
 class Moment(BaseModel):
-    """The values of a case at one time, by quantity; a quantity left out is missing, an age left out unknown."""
+    """The values of a case at one time, by quantity; whatever is left out (quantity, age, fact) is not known."""
 
     model_config = ConfigDict(frozen=True, extra="allow", strict=True)
     __pydantic_extra__: dict[str, Given]
 
     after_minutes: int = Field(ge=0)
     age_years: Number | None = Field(None, ge=0)
+    facts: dict[ContextFact, bool] = {}
+    blood_named_by: tuple[Literal["specimen", "body-site"], ...] = ()
 
     @property
     def values(self) -> dict[str, Given]:
@@ -139,11 +173,11 @@ class Moment(BaseModel):
 
 
 class Case(_Frozen):
-    """What a rule must find at the last of some moments; ``message`` is its exact text where a flag is expected."""
+    """What a rule must find at the last of some moments; ``message`` is the exact text of a flag that stands."""
 
     name: Text
     given: Some[Moment]
-    expect: Literal["flag", "none", "unknown", "cleared"]
+    expect: Literal["flag", "worsened", "none", "unknown", "cleared"]
     message: Text | None = None
 
 
@@ -151,6 +185,7 @@ class Rule(_Frozen):
     """One rule as its team wrote it; ``raises`` and ``clears`` are its conditions in canonical units.
 
     ``needs`` are rules of the same pack and kind of anchor: a flag is raised only where they too find what they seek.
+    What is raised again within ``quiet_minutes`` of being cleared goes on as the same episode.
     """
 
     id: Annotated[str, StringConstraints(pattern=r"^[a-z0-9]+(-[a-z0-9]+)*$")]
@@ -166,7 +201,10 @@ class Rule(_Frozen):
     scope: Scope
     needs: Annotated[Some[Text], Field(max_length=MOST_NEEDED)] = ()
     raise_when: Clause = Field(alias="raise")
+    lasting: Lasting | None = None
+    worse: Worse | None = None
     clear_when: Clause = Field(alias="clear")
+    quiet_minutes: int = Field(0, ge=0)
     message: Text
     cautions: Some[Text]
     sources: Some[Source]
@@ -182,11 +220,17 @@ class Rule(_Frozen):
         """Where the rule clears it."""
         return self.clear_when.condition
 
+    @property
+    def worsens(self) -> Condition | None:
+        """Where an episode is worse, if the rule says."""
+        return self.worse.when.condition if self.worse else None
+
     @cached_property
     def units(self) -> dict[str, str]:
         """The unit in which each quantity is shown: that of the first condition on it."""
         found: dict[str, str] = {}
-        for quantity, unit in (*self.raise_when.units(), *self.clear_when.units()):
+        clauses = (self.raise_when, self.clear_when, *((self.worse.when,) if self.worse else ()))
+        for quantity, unit in (pair for clause in clauses for pair in clause.units()):
             found.setdefault(quantity, unit)
         return found
 
@@ -258,6 +302,8 @@ def _placed(name: str, marks: Marks, place: Place, text: str) -> str:
 def _identity(rule: Rule, stem: str) -> Iterator[tuple[Place, str]]:
     if rule.id != stem:
         yield ("id",), f"must be the file's name, {stem!r}; rename one of them"
+    if rule.worse and SEVERITIES.index(rule.worse.severity) <= SEVERITIES.index(rule.severity):
+        yield ("worse", "severity"), f"must be more than the rule's own, {rule.severity}; change one of them"
 
 
 def _message(rule: Rule) -> Iterator[tuple[Place, str]]:
@@ -276,13 +322,15 @@ def _cases(rule: Rule) -> Iterator[tuple[Place, str]]:
     for kind in ("flag", "none", "unknown"):
         if all(case.expect != kind for case in rule.cases):
             yield ("cases",), f"no case expects {kind!r}; add one"
+    if rule.worse and all(case.expect != "worsened" for case in rule.cases):
+        yield ("cases",), "no case expects 'worsened'; add one"
     names = [case.name for case in rule.cases]
     for number, case in enumerate(rule.cases):
         place: Place = ("cases", number)
         if case.name in names[:number]:
             yield (*place, "name"), "another case has this name; change one"
-        if (case.message is not None) != (case.expect == "flag"):
-            yield place, "a case has a message if, and only if, it expects a flag"
+        if (case.message is not None) != (case.expect in ("flag", "worsened")):
+            yield place, "a case has a message if, and only if, it expects a flag that stands"
         for earlier, later in pairwise(case.given):
             if later.after_minutes <= earlier.after_minutes or later.age_years != earlier.age_years:
                 yield (*place, "given"), "the moments must follow each other, all with the same age_years"

@@ -6,7 +6,7 @@ from collections.abc import Iterator
 
 from fhiro2.catalogue import title_of
 from fhiro2.judge.condition import Operator
-from fhiro2.judge.rulefile import Clause, Rule
+from fhiro2.judge.rulefile import Clause, Rule, Scope
 
 _OPERATORS = {
     Operator.BELOW: "below",
@@ -29,10 +29,11 @@ def told(rule: Rule) -> list[str]:
     return [
         f"{rule.title} ({rule.id}, version {rule.version}, {rule.severity}, {rule.state}; axis: {rule.axis})",
         rule.intent,
-        f"Looked at: {_ANCHORS[rule.at]} of patients of {rule.scope.age_years.least} years or more; "
-        "a patient of unknown age is not evaluated.",
+        f"Looked at: {_ANCHORS[rule.at]} of {_patients(rule.scope)}.",
+        *_limits(rule.scope),
         "Raised when",
         *(f"  {line}" for line in _clause(rule.raise_when)),
+        *_course(rule),
         "Cleared when",
         *(f"  {line}" for line in _clause(rule.clear_when)),
         f"Says: {rule.message}",
@@ -40,6 +41,40 @@ def told(rule: Rule) -> list[str]:
         *(f"Source ({source.kind}, {source.year}): {source.text}" for source in rule.sources),
         f"Cases: {len(rule.cases)}. Owner: {rule.owner}. To be reviewed by {rule.review_by:%d-%b-%Y}.",
     ]
+
+
+def _patients(scope: Scope) -> str:
+    years = scope.age_years
+    if years.most is None:
+        return f"patients of {years.least} years or more; a patient of unknown age is not evaluated"
+    return f"patients of {years.least} to {years.most} years; a patient of unknown age is not evaluated"
+
+
+def _limits(scope: Scope) -> Iterator[str]:
+    for words, facts in (
+        ("Only where it is stated that there is", scope.with_facts),
+        ("Only where it is stated that there is no", scope.without),
+        ("Not where it is stated that there is", scope.unless),
+    ):
+        if facts:
+            yield f"{words}: {', '.join(fact.replace('-', ' ') for fact in facts)}."
+    if scope.blood_named_by:
+        yield f"Only where the kind of blood is named by {' or '.join(scope.blood_named_by).replace('-', ' ')}."
+
+
+def _course(rule: Rule) -> Iterator[str]:
+    if rule.needs:
+        yield f"Only together with: {', '.join(rule.needs)}."
+    if rule.lasting:
+        yield (
+            f"Only after {rule.lasting.minutes} min of it, at samples at most "
+            f"{rule.lasting.at_most_apart_minutes} min apart."
+        )
+    if rule.worse:
+        yield f"Worse ({rule.worse.severity}) when"
+        yield from (f"  {line}" for line in _clause(rule.worse.when))
+    if rule.quiet_minutes:
+        yield f"Raised again within {rule.quiet_minutes} min of being cleared it is the same episode."
 
 
 def _clause(clause: Clause) -> Iterator[str]:

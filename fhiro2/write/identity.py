@@ -43,10 +43,5 @@ def provenance_of(target: str, content_hash: str) -> str:
     return named(f"{target}\n{content_hash}")
 
 
-def anchor_id(observation: str, part: int) -> str:
-    """Name of an anchor: its Observation, with ``#part`` where it is one of the components (``part`` from 0)."""
-    return observation if part < 0 else f"{observation}#{part}"
-
-
 SOFTWARE_ID = named(SOFTWARE)
 SOFTWARE_REFERENCE = f"Device/{SOFTWARE_ID}"

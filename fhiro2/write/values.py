@@ -17,9 +17,10 @@ from fhiro2.catalogue import DERIVED, DERIVED_BY_CODE
 from fhiro2.errors import StopError
 from fhiro2.fhir import systems
 from fhiro2.fhir.resources import date_times, instants, quoted
+from fhiro2.flags import anchor_id
 from fhiro2.model import DAY, HOUR, MINUTE, AnchorTable, Column, Floats, Integers, Outcome, Why
 from fhiro2.write import Run
-from fhiro2.write.identity import anchor_id, named, provenance_of, stem
+from fhiro2.write.identity import named, provenance_of, stem
 from fhiro2.write.observation import Form, notes, observation_shape, source_shape
 from fhiro2.write.provenance import Entities, References, provenance_shape
 
