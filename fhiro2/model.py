@@ -217,7 +217,8 @@ class Column:
 
     ``low``/``high`` differ where only a bound is known. ``source`` and ``runner_up`` are reading rows (-1: none) and
     are filled for inputs; ``inputs``, ``missing`` and ``used`` (bit i: ``inputs[i]`` is missing, or was used) and
-    ``constants`` (number of a row in ``BASES``) are filled for derived values.
+    ``constants`` (number of a row in ``BASES``) are filled for derived values. ``derived`` is filled for an input that
+    may be computed where it was not read: the code of the value of the anchor ``source``, and '' where it was read.
     """
 
     value: Floats
@@ -232,6 +233,7 @@ class Column:
     missing: Integers | None = None
     used: Integers | None = None
     constants: Integers | None = None
+    derived: NDArray[np.str_] | None = None
 
     def known(self) -> Truths:
         """Where the column has a value or a bound."""
@@ -319,7 +321,11 @@ class Timelines:
 
 @dataclass(frozen=True)
 class Evidence:
-    """One value as it stood when a flag was raised: ``reading`` is its row, or -1 for a derived value."""
+    """One value as it stood when a flag was raised.
+
+    ``reading`` is the row it was read from. A derived value has -1 where it is of the flag's own anchor; else
+    ``reading`` is its anchor, and ``derived`` its code there.
+    """
 
     name: str
     value: float
@@ -327,6 +333,7 @@ class Evidence:
     unit: str
     age: int
     reading: int
+    derived: str = ""
 
 
 @dataclass(frozen=True)

@@ -124,7 +124,9 @@ def _evidence(name: str, timelines: Timelines, table: AnchorTable, place: int) -
     column = table.columns[name]
     reading = int(column.source[place])
     age = int(table.effective[place]) - int(timelines.readings["effective"][reading]) if reading >= 0 else 0
-    return Evidence(name, float(column.value[place]), float(column.uncertainty[place]), unit_of(name), age, reading)
+    derived = "" if column.derived is None else str(column.derived[place])
+    value, uncertainty = float(column.value[place]), float(column.uncertainty[place])
+    return Evidence(name, value, uncertainty, unit_of(name), age, reading, derived)
 
 
 def _message(rule: Rule, table: AnchorTable, place: int) -> str:

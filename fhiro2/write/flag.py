@@ -69,11 +69,9 @@ def _rendered(
             f"flag of rule {flag.rule} at Observation {flag.anchor_id}: its evidence is not in this batch; "
             "assess the patient's whole timeline again"
         )
-    rows = [flag.anchor, *(found.reading for found in flag.evidence if found.reading >= 0)]
+    rows = [flag.anchor, *(found.reading for found in flag.evidence if _is_read(found))]
     origins = list(dict.fromkeys(timelines.readings["origin"][rows].tolist()))
-    derived = [
-        about(patient.source, flag.subject, flag.anchor_id, found.name) for found in flag.evidence if found.reading < 0
-    ]
+    derived = [_value_id(timelines, patient, flag, found) for found in flag.evidence if not _is_read(found)]
     values = [f"Observation/{value}" for value in derived]
     identity = about(patient.source, flag.subject, flag.anchor_id, flag.rule)
     times = [flag.raised] if flag.cleared is None else [flag.raised, flag.cleared]
@@ -92,6 +90,19 @@ def _rendered(
     policy = f"{systems.RULE}/{flag.rule}/{flag.rule_version}"
     origin = provenance_shape(run, "Flag", policy)
     return line, origin.filled((provenance_of(identity, content_hash), identity, period[0], ",".join(sources)))
+
+
+def _is_read(found: Evidence) -> bool:
+    return found.reading >= 0 and not found.derived
+
+
+def _value_id(timelines: Timelines, patient: Patient, flag: Flag, found: Evidence) -> str:
+    """Id of the derived value that is evidence, at the flag's own anchor or at another of the same patient."""
+    if found.reading < 0:
+        return about(patient.source, flag.subject, flag.anchor_id, found.name)
+    row = timelines.readings[found.reading]
+    anchor = anchor_id(timelines.origins.ids[int(row["origin"])], int(row["part"]))
+    return about(patient.source, timelines.names.subjects[int(row["subject"])], anchor, found.derived)
 
 
 def _is_here(timelines: Timelines, flag: Flag) -> bool:
