@@ -148,6 +148,7 @@ MEASURED: tuple[Measured, ...] = (
 
 _CONTENT = "Binding factor: Dijkhuizen et al., Pflugers Arch 1977;369:223; solubility as in anaesthesia texts (common practice)"
 _FICK = "Fick A, 1870: flow = uptake / content difference (reversed)"
+_CURVE = "Siggaard-Andersen M & O, Scand J Clin Lab Invest Suppl 1990;203:29-45"
 _ALVEOLAR = "Fenn, Rahn & Otis 1946, full form of the alveolar air equation"
 
 DERIVED: tuple[Derived, ...] = (
@@ -222,6 +223,14 @@ DERIVED: tuple[Derived, ...] = (
     ),
     Derived("oxygen-extraction-ratio", "Oxygen extraction ratio", "1", 2, "extraction-ratio/1", _FICK),
     Derived(
+        "oxygen-extraction-excess",
+        "Oxygen extraction ratio above the expected one",
+        "1",
+        2,
+        "extraction-excess/1",
+        "Fick A, 1870; expected at a consumption index of 130 mL/min/m2 and a cardiac index of 3 L/min/m2 (common practice)",
+    ),
+    Derived(
         "oxygen-extraction-ratio-central",
         "Oxygen extraction ratio from central venous blood",
         "1",
@@ -259,10 +268,19 @@ DERIVED: tuple[Derived, ...] = (
         "%",
         1,
         "dissociation-tanh-1990/1",
-        "Siggaard-Andersen M & O, Scand J Clin Lab Invest Suppl 1990;203:29-45",
+        _CURVE,
         "51733-4",
         "Oxygen saturation Calculated from oxygen partial pressure in Arterial blood",
     ),
+    Derived(
+        "saturation-gap-measured",
+        "Measured minus predicted arterial saturation",
+        "%",
+        1,
+        "saturation-gap/1",
+        _CURVE,
+    ),
+    Derived("saturation-gap-pulse", "SpO2 minus predicted arterial saturation", "%", 1, "saturation-gap/1", _CURVE),
     Derived(
         "cardiac-index",
         "Cardiac index",
@@ -334,6 +352,7 @@ INPUTS: tuple[Input, ...] = (
     Input("pb", "barometric pressure", "pb"),
     Input("temp", "core temperature", "temp_core"),
     Input("co", "cardiac output", "co"),
+    Input("ci", "cardiac index", "ci"),
     Input("weight", "body weight", "weight"),
     Input("height", "body height", "height"),
     Input("spo2", "SpO2", "spo2"),

@@ -219,7 +219,8 @@ class Column:
 
     ``low``/``high`` differ where only a bound is known. ``source`` and ``runner_up`` are reading rows (-1: none) and
     are filled for inputs; ``inputs``, ``missing`` and ``used`` (bit i: ``inputs[i]`` is missing, or was used) and
-    ``constants`` (number of a row in ``BASES``) are filled for derived values.
+    ``constants`` (number of a row in ``BASES``) are filled for derived values. ``derived`` is filled for an input that
+    may be computed where it was not read: the code of the value of the anchor ``source``, and '' where it was read.
     """
 
     value: Floats
@@ -234,6 +235,7 @@ class Column:
     missing: Integers | None = None
     used: Integers | None = None
     constants: Integers | None = None
+    derived: NDArray[np.str_] | None = None
 
     def known(self) -> Truths:
         """Where the column has a value or a bound."""

@@ -4,14 +4,14 @@ from __future__ import annotations
 
 import json
 from itertools import product
-from typing import Any
+from typing import Any, get_args
 
 import pytest
 
 from fhiro2.errors import Bucket, Reason
 from fhiro2.fhir.systems import IDENTIFIERS, SOFTWARE_IDENTIFIER, VALUE_IDENTIFIER
 from fhiro2.model import Caution, Kind, Specimen, SpecimenEvidence
-from fhiro2.settings import Settings
+from fhiro2.settings import ContextFact, Settings
 from tests.feeds import (
     SITE,
     UCUM,
@@ -350,6 +350,15 @@ def test_a_fact_is_yes_no_or_unknown_at_the_instant(stated: dict[str, Any], stat
 )
 def test_context_that_states_nothing_is_accounted_for(stated: dict[str, Any], reason: Reason) -> None:
     assert fate(stated, given=FACTS)[1] is reason
+
+
+@pytest.mark.parametrize("name", get_args(ContextFact))
+def test_every_fact_of_the_mapping_is_stated_at_the_anchors(name: str) -> None:
+    site = mapping(facts=[{"system": SITE, "code": "ECMO", "fact": name}])
+    facts = pair(observation(), condition(onsetDateTime=at(-600)), given=site).tables["arterial"].facts
+    assert {fact: state.tolist() for fact, state in facts.items()} == {
+        fact: [1 if fact == name else -1] for fact in get_args(ContextFact)
+    }
 
 
 def test_a_medication_and_a_device_can_state_a_fact() -> None:

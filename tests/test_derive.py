@@ -18,7 +18,8 @@ Resource = dict[str, Any]
 MINUTE = 60
 ADULT = patient(birthDate="1960-02-01")
 CONTENT, DIFFERENCE, EXTRACTION = "oxygen-content-arterial", "oxygen-content-difference", "oxygen-extraction-ratio"
-DELIVERY, UPTAKE = "oxygen-delivery", "oxygen-consumption"
+DELIVERY, UPTAKE, EXCESS = "oxygen-delivery", "oxygen-consumption", "oxygen-extraction-excess"
+PREDICTED, GAP, PULSE_GAP = "saturation-predicted", "saturation-gap-measured", "saturation-gap-pulse"
 
 
 def arterial(**changes: Resource | None) -> list[Resource]:
@@ -114,7 +115,7 @@ def test_a_pair_gives_difference_extraction_and_with_flow_uptake() -> None:
 def test_without_a_positive_difference_nothing_follows(saturation: float, why: Why) -> None:
     found = made(*arterial(), *venous(saturation), FLOW)
     assert found.why(EXTRACTION) is why
-    assert found.why(UPTAKE) is (Why.UNCERTAIN_DIFFERENCE if why is Why.KNOWN else why)
+    assert found.why(UPTAKE) is found.why(EXCESS) is (Why.UNCERTAIN_DIFFERENCE if why is Why.KNOWN else why)
 
 
 def test_a_difference_within_its_doubt_gives_a_bound_and_no_uptake() -> None:
@@ -123,7 +124,7 @@ def test_a_difference_within_its_doubt_gives_a_bound_and_no_uptake() -> None:
     assert column.low.tolist() == [0.0]
     assert 0 < column.high[0] < 0.1
     assert found.cautions(EXTRACTION) & Caution.LOW_DIFFERENCE
-    assert found.why(UPTAKE) is Why.UNCERTAIN_DIFFERENCE
+    assert found.why(UPTAKE) is found.why(EXCESS) is Why.UNCERTAIN_DIFFERENCE
     assert found.why(DELIVERY) is Why.KNOWN
 
 
@@ -138,7 +139,7 @@ def test_haemoglobins_more_than_six_percent_apart_are_no_pair(haemoglobin: float
 def test_support_and_lesions_exclude_what_they_distort(name: str) -> None:
     stated, site = fact("X", name)
     found = made(*arterial(), *venous(), FLOW, stated, given=site)
-    assert found.why(EXTRACTION) is found.why(UPTAKE) is Why.CONTEXT_EXCLUDES
+    assert found.why(EXTRACTION) is found.why(UPTAKE) is found.why(EXCESS) is Why.CONTEXT_EXCLUDES
     assert found.why(CONTENT) is found.why(DELIVERY) is Why.KNOWN
 
 
@@ -176,7 +177,7 @@ def test_central_venous_blood_has_its_own_values_and_never_mixed_ones() -> None:
     ]
     site = mapping(specimens=[{"system": SITE, "code": "cvc", "specimen": "central_venous"}])
     found = made(*arterial(), *central, FLOW, given=site)
-    assert found.why(EXTRACTION) is found.why(UPTAKE) is Why.INPUT_MISSING
+    assert found.why(EXTRACTION) is found.why(UPTAKE) is found.why(EXCESS) is Why.INPUT_MISSING
     assert found.cautions(f"{EXTRACTION}-central") & Caution.CENTRAL_NOT_MIXED
 
 
@@ -190,6 +191,67 @@ def test_the_same_haemoglobin_counts_once_in_the_doubt_of_an_extraction() -> Non
         *venous(65),
     ).column(EXTRACTION)  # fmt: skip
     assert column.uncertainty[0] == pytest.approx(0.0133, abs=0.0003)
+
+
+# --- extraction against what is expected -------------------------------------------------------------------------
+
+
+def gas(pressure: float, unit: str = "mm[Hg]", **changes: Resource | None) -> list[Resource]:
+    """A sample at 37 Cel, pH 7.40 and 5.33 kPa of carbon dioxide, where the curve has its standard p50."""
+    parts: dict[str, Resource | None] = {
+        "po2": observation("po2", value=pressure, unit=unit),
+        "ph": observation("ph", "2744-1", 7.40, "[pH]"),
+        "pco2": observation("pco2", "2019-8", 5.33, "kPa"),
+        **changes,
+    }
+    return [part for part in parts.values() if part is not None]
+
+
+@pytest.mark.parametrize(("haemoglobin", "excess"), [((6.5, "g/dL"), 0.05), ((65, "g/L"), 0.05), ((14, "g/dL"), 0.31)])
+@pytest.mark.parametrize("pressure", [(95, "mm[Hg]"), (12.67, "kPa")])
+def test_one_venous_saturation_is_an_excess_at_one_haemoglobin_and_not_at_another(
+    haemoglobin: tuple[float, str], excess: float, pressure: tuple[float, str]
+) -> None:
+    """98 and 45 %. Hb 6.5: (8.821 - 4.034) / 8.821 - 130 / (30 x 8.821) = 0.543 - 0.491 = 0.05 (definition).
+
+    Hb 14: (18.67 - 8.556) / 18.67 - 130 / (30 x 18.67) = 0.542 - 0.232 = 0.31.
+    """
+    found = made(
+        *arterial(
+            po2=observation("po2", "2703-7", *pressure),
+            so2=observation("so2", "2708-6", 98, "%"),
+            hb=observation("hb", "14775-1", *haemoglobin),
+        ),
+        *venous(45),
+    )
+    assert found.value(EXCESS) == excess
+    assert found.cautions(EXCESS) == found.cautions(EXTRACTION)
+    assert found.cautions(EXCESS) & Caution.CONTEXT_UNKNOWN
+
+
+def test_the_doubt_of_an_excess_counts_the_arterial_content_once() -> None:
+    """Excess = 1 - (Cv + 4.333) / Ca: with Hb 10, 92 and 65 % it is -0.047, and by Sa, Sv and Hb (u 0.01, 0.01, 0.2):
+
+    Ca = 1.34 x 9.2 + 0.24 = 12.57, Cv = 8.71 + 0.11 = 8.82; d/dSa = 13.4 x 13.16 / 12.57^2 = 1.116,
+    d/dSv = -13.4 / 12.57 = -1.066, d/dHb = -(0.871 x 12.57 - 1.233 x 13.16) / 12.57^2 = 0.0334; so 0.0168, and the
+    binding constant (u 0.0144) adds what Hb would at 10 x 0.0144 / 1.34: 0.0036. Together 0.0172.
+    """
+    column = made(
+        *arterial(
+            po2=observation("po2", value=80), so2=observation("so2", "2708-6", 92, "%"),
+            hb=observation("hb", "14775-1", 10, "g/dL"),
+        ),
+        *venous(65),
+    ).column(EXCESS)  # fmt: skip
+    assert column.value[0] == pytest.approx(-0.05, abs=0.001)
+    assert column.uncertainty[0] == pytest.approx(0.0172, abs=0.0002)
+
+
+@pytest.mark.parametrize("born", [{"birthDate": "2008-03-02"}, {}])
+def test_what_is_expected_holds_for_adults(born: dict[str, str]) -> None:
+    found = pair(*arterial(), *venous(), patient(**born))
+    assert found.why(EXCESS) is Why.AGE_EXCLUDES
+    assert found.why(EXTRACTION) is Why.KNOWN
 
 
 # --- ranges and ages ---------------------------------------------------------------------------------------------
@@ -287,6 +349,82 @@ def test_an_infant_s_saturation_is_not_predicted() -> None:
     assert found.why("saturation-predicted") is Why.AGE_EXCLUDES
 
 
+# --- saturation against its prediction ---------------------------------------------------------------------------
+
+
+def saturated(percent: float) -> Resource:
+    return observation("so2", "2708-6", percent, "%")
+
+
+def pulse(percent: float, seconds: float = 0) -> Resource:
+    return observation("spo2", "59408-5", percent, "%", seconds, category="vital-signs")
+
+
+@pytest.mark.parametrize("pressure", [(3.578, "kPa"), (26.84, "mm[Hg]")])
+def test_gaps_are_what_was_measured_less_what_the_curve_says(pressure: tuple[float, str]) -> None:
+    """Half saturated at the standard p50, 3.578 kPa (Siggaard-Andersen 1990): 42 - 50 = -8, 45 - 50 = -5 points."""
+    found = made(*gas(*pressure), saturated(42), pulse(45))
+    assert found.value(GAP) == pytest.approx(-8, abs=0.1)
+    assert found.value(PULSE_GAP) == pytest.approx(-5, abs=0.1)
+    assert found.cautions(GAP) & Caution.SHIFT_ASSUMED
+
+
+@pytest.mark.parametrize(("code", "doubt"), [(GAP, 1.0), (PULSE_GAP, 4.0)])
+def test_the_doubt_of_a_gap_is_that_of_both_its_sides(code: str, doubt: float) -> None:
+    """They share no input: u^2 = u^2(measured) + u^2(predicted) (JCGM 100:2008, eq. 10); 1 point, SpO2 4 points."""
+    found = made(*gas(60), saturated(80), pulse(82))
+    predicted = float(found.column(PREDICTED).uncertainty[0])
+    assert predicted > 0.5
+    assert found.column(code).uncertainty[0] == pytest.approx((doubt**2 + predicted**2) ** 0.5, rel=1e-9)
+
+
+@pytest.mark.parametrize(
+    "only",
+    [observation("curve", "51733-4", 80, "%"), saturated(50)],
+    ids=["calculated by its code", "as the curve says"],
+)
+def test_a_calculated_saturation_has_no_gap(only: Resource) -> None:
+    found = made(*gas(26.84), only, pulse(60))
+    assert found.why(GAP) is Why.NOT_COMPUTED_FROM_CALCULATED
+    assert found.why(PULSE_GAP) is Why.KNOWN
+
+
+@pytest.mark.parametrize(
+    ("parts", "gap", "pulse_gap"),
+    [
+        ([*gas(701), saturated(90), pulse(90)], Why.OUT_OF_RANGE, Why.OUT_OF_RANGE),
+        ([*gas(700), saturated(90), pulse(90)], Why.KNOWN, Why.KNOWN),
+        ([saturated(90), pulse(90)], Why.INPUT_MISSING, Why.INPUT_MISSING),
+        ([*gas(90), pulse(90)], Why.INPUT_MISSING, Why.KNOWN),
+        ([*gas(90), saturated(90)], Why.KNOWN, Why.INPUT_MISSING),
+        ([*gas(90), pulse(90, 120)], Why.INPUT_MISSING, Why.KNOWN),
+        ([*gas(90), pulse(90, 121)], Why.INPUT_MISSING, Why.INPUT_MISSING),
+        ([*gas(40), saturated(70), pulse(97)], Why.SUSPECT_SAMPLE, Why.SUSPECT_SAMPLE),
+    ],
+    ids=["too high", "just not", "no pressure", "SpO2 alone", "no SpO2", "near", "not near", "perhaps venous"],
+)
+def test_what_a_gap_needs(parts: list[Resource], gap: Why, pulse_gap: Why) -> None:
+    found = made(*parts)
+    assert (found.why(GAP), found.why(PULSE_GAP)) == (gap, pulse_gap)
+
+
+def test_a_saturation_whose_sample_does_not_add_up_has_no_gap() -> None:
+    fractions = [
+        observation("fo2hb", "2714-4", 80, "%"), observation("cohb", "2030-5", 2, "%"),
+        observation("methb", "2615-3", 1, "%"),
+    ]  # fmt: skip
+    found = made(*gas(90), saturated(90), *fractions, pulse(90))
+    assert found.why(GAP) is Why.SUSPECT_SAMPLE
+    assert found.why(PULSE_GAP) is Why.KNOWN
+
+
+def test_without_a_prediction_there_is_no_gap() -> None:
+    found = made(*gas(90), saturated(90), pulse(90), settings=Settings(assume_dpg=False))
+    assert found.why(GAP) is found.why(PULSE_GAP) is Why.INPUT_MISSING
+    infant = pair(*gas(90), saturated(90), pulse(90), patient(birthDate="2026-01-10"))
+    assert infant.why(GAP) is infant.why(PULSE_GAP) is Why.AGE_EXCLUDES
+
+
 # --- bounds ------------------------------------------------------------------------------------------------------
 
 
@@ -302,6 +440,13 @@ def test_a_bound_travels_through_the_formula() -> None:
     assert (column.low[0], column.high[0]) == (1250, float("inf"))
     column = made(bound("po2", "2703-7", 50, "mm[Hg]", "<"), AIR).column("pf-ratio")
     assert (column.low[0], column.high[0]) == (0, 125)
+
+
+def test_a_bound_of_the_measured_saturation_bounds_the_gap() -> None:
+    """Below 42 % at the standard p50, where 50 % are predicted: between -50 and -8 points."""
+    column = made(*gas(26.84), bound("so2", "2708-6", 42, "%", "<")).column(GAP)
+    assert column.low[0] == pytest.approx(-50, abs=0.1)
+    assert column.high[0] == pytest.approx(-8, abs=0.1)
 
 
 def test_too_many_bounds_give_no_value() -> None:

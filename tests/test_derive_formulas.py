@@ -162,6 +162,20 @@ def test_consumption_is_extraction_of_delivery(cardiac_output, arterial, part):
     assert consumed == pytest.approx(delivered * transport.extraction_ratio(arterial, venous), rel=1e-12)
 
 
+@given(number(5, 25))
+def test_ordinary_flow_and_consumption_are_no_excess_at_any_content(arterial):
+    """130 mL/min/m2 taken from 3.0 L/min/m2 leave 130 / (10 x 3.0) = 4.333 mL/dL less in venous blood (Fick)."""
+    assert transport.extraction_excess(arterial, arterial - 130 / 30) == pytest.approx(0, abs=1e-12)
+
+
+@pytest.mark.parametrize(("hb", "expected"), [(6.5, 0.49), (10, 0.32), (14, 0.23)])
+def test_what_extraction_low_haemoglobin_alone_explains(hb, expected):
+    """Worked figures, rounded: 1.34 mL/g, 95 mm[Hg], saturation 0.9739 there by Severinghaus 1979, eq. 1."""
+    arterial = oxygen_content.content(1.34, hb, 0.9739, 0, SOLUBILITY_0_0031, 95)
+    everything = transport.extraction_excess(arterial, 0 * arterial)
+    assert 1 - everything == pytest.approx(expected, abs=0.005)
+
+
 # Gas exchange
 
 

@@ -7,10 +7,11 @@ from pathlib import Path
 import pytest
 from typer.main import get_command
 
-from fhiro2.catalogue import BASES, DERIVED, INPUTS, MEASURED_BY_NAME
+from fhiro2.catalogue import BASES, DERIVED, DERIVED_BY_CODE, INPUTS, MEASURED_BY_NAME
 from fhiro2.cli import app
 from fhiro2.codes import LOINC_NOTICE
 from fhiro2.derive import codes_of
+from fhiro2.derive.constants import ORDINARY_CARDIAC_INDEX, ORDINARY_CONSUMPTION_INDEX
 from fhiro2.errors import Reason
 from fhiro2.model import CAUTION_TEXT, WHY_TEXT, Caution, Why
 from fhiro2.settings import Mapping, Settings, Windows
@@ -89,7 +90,8 @@ def test_every_formula_has_outside_evidence() -> None:
         "oxygen-content": "o2_content", "content-difference": "o2_content", "oxygen-delivery": "do2",
         "oxygen-delivery-index": "index_by_surface", "reverse-fick": "vo2_fick",
         "reverse-fick-index": "index_by_surface",
-        "extraction-ratio": "o2er", "alveolar-air": "pao2_alveolar_full",
+        "extraction-ratio": "o2er", "extraction-excess": "extraction_excess",
+        "saturation-gap": "saturation_gap", "alveolar-air": "pao2_alveolar_full",
         "alveolar-arterial-gradient": "aa_gradient", "pf-ratio": "pf_ratio", "sf-ratio": "sf_ratio",
         "dissociation-tanh-1990": "p50_siggaard_andersen_1990",
         "cardiac-index": "index_by_surface",
@@ -99,6 +101,12 @@ def test_every_formula_has_outside_evidence() -> None:
         checked = {row["formula"] for row in csv.DictReader(stream) if row["kind"] != "computed"}
     for row in DERIVED:
         assert formula[row.formula.rpartition("/")[0]] in checked, row.code
+
+
+def test_the_method_of_the_extraction_excess_says_what_is_ordinary() -> None:
+    told = DERIVED_BY_CODE["oxygen-extraction-excess"].source
+    for constant in (ORDINARY_CONSUMPTION_INDEX, ORDINARY_CARDIAC_INDEX):
+        assert f"{constant.value:g} {constant.unit}" in told
 
 
 def test_inputs_and_bases_are_sound() -> None:

@@ -224,6 +224,39 @@ def test_saturation_is_predicted_for_each_gas_and_near_another_equation(feed: Fe
         assert abs(line["valueQuantity"]["value"] - expected) <= 2 * doubt
 
 
+def test_each_gas_with_a_pulse_reading_within_two_minutes_has_its_gap(feed: Feed) -> None:
+    """Counted on the plain JSON; each gap is the reading less the predicted saturation that was written beside it."""
+    pulses = {line["id"]: line for line in feed.observations("2708-6")}
+    near = [
+        gas["id"]
+        for gas in feed.observations("2703-7")
+        if any(
+            pulse["subject"] == gas["subject"]
+            and abs(moment(pulse["effectiveDateTime"]) - moment(gas["effectiveDateTime"])) <= 2 * MINUTE
+            for pulse in pulses.values()
+        )
+    ]
+    written = [line for line in feed.written("observations.ndjson") if "valueQuantity" in line]
+    predicted, gaps = (
+        {anchor_of(line): line for line in written if own_code(line) == name}
+        for name in ("saturation-predicted", "saturation-gap-pulse")
+    )
+    assert sorted(gaps) == sorted(near)
+    assert near
+    for anchor, line in gaps.items():
+        sources = [row["reference"].removeprefix("Observation/") for row in line["derivedFrom"]]
+        (pulse,) = (pulses[source] for source in sources if source in pulses)
+        expected = pulse["valueQuantity"]["value"] - predicted[anchor]["valueQuantity"]["value"]
+        assert line["valueQuantity"]["value"] == pytest.approx(expected, abs=0.051)  # each rounded to one decimal
+
+
+def anchor_of(line: Line) -> str:
+    """The oxygen pressure that a value at an arterial gas rests on."""
+    (anchor,) = (row["reference"] for row in line["derivedFrom"] if row["display"].startswith("pao2"))
+    found: str = anchor.removeprefix("Observation/")
+    return found
+
+
 def own_code(line: Line) -> str:
     found: str = line["code"]["coding"][-1]["code"]
     return found
@@ -345,6 +378,7 @@ def test_census_names_what_this_feed_allows_and_what_not(feed: Feed, counted: Ce
     verdicts = {value: prospect.verdict() for value, prospect in counted.prospects.items()}
     assert [value for value, verdict in verdicts.items() if verdict != "no-go"] == [
         "saturation-predicted",
+        "saturation-gap-pulse",
         "body-surface-area",
     ]
     page = shown(counted)
@@ -385,7 +419,8 @@ def test_census_says_what_would_unlock_most(feed: Feed, counted: Census) -> None
     assert "No code for inspired oxygen fraction was seen: send 3150-0 or 19994-3" in first
     assert f"Oxygen flow was seen (3151-8, {flows} times); a flow is not a fraction" in first
     assert second.startswith(
-        f"Then haemoglobin and measured arterial saturation together: up to {gases} more values (Arterial oxygen cont"
+        f"Then haemoglobin and measured arterial saturation together: up to {2 * gases} more values "
+        "(Arterial oxygen content; Measured minus predicted arterial saturation)"
     )
     assert f"Haemoglobin was read {haemoglobins} times; elsewhere no record near enough in time (up to " in second
     assert f"2708-6 was seen {pulses} times, but as a vital sign: that is pulse oximetry" in second

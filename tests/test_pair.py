@@ -30,6 +30,7 @@ def beside(partner: Resource, *more: Resource) -> Paired:
 
 EITHER_WAY = {
     "co": ("8737-9", 5.0, "L/min", 15 * MINUTE),
+    "ci": ("75919-1", 2.5, "L/min/m2", 15 * MINUTE),
     "temp": ("8329-5", 37.0, "Cel", HOUR),
     "spo2": ("59408-5", 97.0, "%", 2 * MINUTE),
 }

@@ -108,6 +108,9 @@ FORMULAS = {
     "ellis_inverse_roundtrip": lambda given: dissociation.ellis(given["so2_fraction"]),
     "p50_severinghaus_curve": lambda given: dissociation.ellis(0.5),
     "siggaard_andersen_1990_so2": lambda given: dissociation.saturation(oxygen_pressure(given), *shifts(given)),
+    "saturation_gap": lambda given: dissociation.saturation_gap(
+        given["so2"], dissociation.saturation(oxygen_pressure(given), *shifts(given))
+    ),
     "p50_siggaard_andersen_1990": lambda given: p50(**given),
     "bohr_siggaard_andersen_1990": lambda given: slope_of_log_p50(
         "pH", given["pH1"], given["pH2"], pco2_kPa=given["pco2_kPa"]
@@ -129,6 +132,7 @@ FORMULAS = {
         given["co_lmin"], given["do2"] / (10 * given["co_lmin"]) - given["cvo2_mldl"]
     ),
     "o2er": lambda given: transport.extraction_ratio(given["cao2_mldl"], given["cvo2_mldl"]),
+    "extraction_excess": lambda given: transport.extraction_excess(given["cao2_mldl"], given["cvo2_mldl"]),
     "index_by_surface": lambda given: transport.index(given["quantity"], given["bsa_m2"]),
     "bsa_dubois": lambda given: transport.body_surface_area(given["height_cm"], given["weight_kg"]),
     "pao2_alveolar_full": lambda given: alveolar.alveolar_pressure(

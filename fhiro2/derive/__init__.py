@@ -8,7 +8,7 @@ What a quantity is stands in ``catalogue.DERIVED``; its equation in ``oxygen_con
 from __future__ import annotations
 
 from fhiro2.catalogue import DERIVED
-from fhiro2.derive.body import add_body
+from fhiro2.derive.body import add_body, take_index
 from fhiro2.derive.contents import add_contents
 from fhiro2.derive.doubt import mark_arterial
 from fhiro2.derive.exchange import add_exchange
@@ -23,6 +23,7 @@ def add_derived(tables: dict[str, AnchorTable], timelines: Timelines, settings: 
     add_contents(arterial, tables["mixed-venous"], tables["central-venous"], timelines)
     add_exchange(arterial, tables["pulse-oximetry"], timelines, settings)
     add_body(tables["cardiac-output"], tables["body"], timelines)
+    take_index(arterial, timelines)
 
 
 def codes_of(table: AnchorTable) -> list[str]:

@@ -12,6 +12,7 @@ from dataclasses import dataclass
 import numpy as np
 
 from fhiro2.derive.constants import BINDING_OXYHAEMOGLOBIN, BINDING_TOTAL
+from fhiro2.derive.doubt import fractions_disagree
 from fhiro2.derive.operand import Operand, exact
 from fhiro2.model import AnchorTable, Caution, Column, Integers, Truths, Why, choose
 
@@ -81,8 +82,7 @@ def _saturation(table: AnchorTable, side: Side, by_fraction: Truths, crossed: Tr
     functional, fractional = table.columns[side.functional], table.columns[side.fractional]
     column = choose(by_fraction | (fractional.known() & ~functional.known()), fractional, functional)
     column.why[crossed] = Why.DIFFERENT_BASIS
-    doubt = (column.cautions & np.uint64(Caution.FRACTIONS_DISAGREE)) != 0
-    column.why[doubt & column.known()] = Why.SUSPECT_SAMPLE
+    column.why[fractions_disagree(column)] = Why.SUSPECT_SAMPLE
     return Operand(column, {side.functional: ~by_fraction, side.fractional: by_fraction})
 
 

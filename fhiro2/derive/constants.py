@@ -95,6 +95,22 @@ KILOPASCAL_PER_MMHG = Constant(
     "UCUM: m[Hg] = 133.3220 kPa",
 )
 
+ORDINARY_CONSUMPTION_INDEX = Constant(
+    "ordinary-consumption-index",
+    130.0,
+    "mL/min/m2",
+    0.0,
+    "adults at rest, within the usual 110 to 160 (common practice); a point of reference, so without uncertainty",
+)
+
+ORDINARY_CARDIAC_INDEX = Constant(
+    "ordinary-cardiac-index",
+    3.0,
+    "L/min/m2",
+    0.0,
+    "adults at rest, within the usual 2.5 to 4.0 (common practice); a point of reference, so without uncertainty",
+)
+
 CONSTANTS: tuple[Constant, ...] = (
     BINDING_OXYHAEMOGLOBIN,
     BINDING_TOTAL,
@@ -105,4 +121,6 @@ CONSTANTS: tuple[Constant, ...] = (
     STANDARD_PH,
     STANDARD_PCO2,
     KILOPASCAL_PER_MMHG,
+    ORDINARY_CONSUMPTION_INDEX,
+    ORDINARY_CARDIAC_INDEX,
 )

@@ -10,7 +10,7 @@ from fhiro2.derive.constants import SOLUBILITY
 from fhiro2.derive.doubt import mark_fractions, suspect
 from fhiro2.derive.operand import Guard, Mark, Operand, derive, fixed, read, within
 from fhiro2.derive.oxygen_content import content
-from fhiro2.derive.transport import consumption, delivery, extraction_ratio, index
+from fhiro2.derive.transport import consumption, delivery, extraction_excess, extraction_ratio, index
 from fhiro2.model import AnchorTable, Caution, Column, Floats, Timelines, Truths, Why
 
 _ARTERIAL = Side("sao2", "fo2hba")
@@ -98,6 +98,10 @@ def _extraction(*pair: Floats) -> Floats:
     return extraction_ratio(*_content_pair(*pair))
 
 
+def _excess(*pair: Floats) -> Floats:
+    return extraction_excess(*_content_pair(*pair))
+
+
 def _consumption(flow: Floats, *pair: Floats) -> Floats:
     return consumption(flow, _difference(*pair))
 
@@ -145,6 +149,7 @@ def _pair(table: AnchorTable, timelines: Timelines) -> None:
     derive(table, "oxygen-extraction-ratio", _extraction, operands, guards, marks, found.number)
     flow = read(table, "co")
     sizes, adult = surface(table, timelines)
+    derive(table, "oxygen-extraction-excess", _excess, operands, [*guards, adult], marks, found.number)
     method = (flow.column.cautions & np.uint64(Caution.CARDIAC_OUTPUT_METHOD_UNKNOWN)) != 0
     guards = [*guards, within(flow, *FLOW), Guard(method, Why.CARDIAC_OUTPUT_METHOD)]
     derive(table, "oxygen-consumption", _consumption, [flow, *operands], guards, marks, found.number)
@@ -161,7 +166,7 @@ def _pair(table: AnchorTable, timelines: Timelines) -> None:
         table,
         "oxygen-content-difference",
         "oxygen-extraction-ratio",
-        ("oxygen-consumption", "oxygen-consumption-index"),
+        ("oxygen-extraction-excess", "oxygen-consumption", "oxygen-consumption-index"),
     )
 
 
@@ -175,8 +180,8 @@ def _central_pair(table: AnchorTable) -> None:
     _judge_difference(table, "oxygen-content-difference-central", "oxygen-extraction-ratio-central", ())
 
 
-def _judge_difference(table: AnchorTable, difference: str, extraction: str, uptakes: tuple[str, ...]) -> None:
-    """No positive difference: nothing follows. Within twice its doubt: extraction is a bound, uptake is withheld."""
+def _judge_difference(table: AnchorTable, difference: str, extraction: str, others: tuple[str, ...]) -> None:
+    """No positive difference: nothing follows. Within twice its doubt: extraction is a bound, others are withheld."""
     column = table.columns[difference]
     negative = column.known() & ~(column.high > 0)
     doubtful = column.known() & ~negative & (column.value <= 2 * column.uncertainty)
@@ -187,9 +192,9 @@ def _judge_difference(table: AnchorTable, difference: str, extraction: str, upta
     ratio_column.value[loose] = ratio_column.uncertainty[loose] = np.nan
     for name in (difference, extraction):
         table.columns[name].cautions[doubtful] |= np.uint64(Caution.LOW_DIFFERENCE)
-    for name in (extraction, *uptakes):
+    for name in (extraction, *others):
         _withhold(table.columns[name], negative, Why.NO_POSITIVE_DIFFERENCE)
-    for name in uptakes:
+    for name in others:
         _withhold(table.columns[name], doubtful, Why.UNCERTAIN_DIFFERENCE)
 
 

@@ -54,6 +54,14 @@ def saturation(
     return result
 
 
+def saturation_gap(observed: Floats, predicted: Floats) -> Floats:
+    """How far an ``observed`` saturation lies above the ``predicted`` one, in points of percent; both as fractions.
+
+    Source: definition.
+    """
+    return 100.0 * (observed - predicted)
+
+
 def pressure(
     saturation: Floats,
     ph: Floats,

@@ -45,6 +45,12 @@ def mark_fractions(table: AnchorTable, functional: str, fractional: str) -> None
         _mark(column, apart | beyond, Caution.FRACTIONS_DISAGREE)
 
 
+def fractions_disagree(column: Column) -> Truths:
+    """Where a known saturation belongs to a sample whose fractions do not add up."""
+    result: Truths = column.known() & ((column.cautions & np.uint64(Caution.FRACTIONS_DISAGREE)) != 0)
+    return result
+
+
 def _mark(column: Column, where: Truths, caution: Caution) -> None:
     column.cautions[where] |= np.uint64(caution)
 

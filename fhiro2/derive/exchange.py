@@ -1,4 +1,4 @@
-"""Gas exchange: alveolar pressure and gradient, ratios to inspired oxygen, predicted saturation."""
+"""Gas exchange: alveolar pressure and gradient, ratios to inspired oxygen, saturation against its prediction."""
 
 from __future__ import annotations
 
@@ -8,8 +8,8 @@ from fhiro2.derive.alveolar import alveolar_pressure, gradient, ratio, water_vap
 from fhiro2.derive.body import YEAR, age
 from fhiro2.derive.constants import KILOPASCAL_PER_MMHG as KPA
 from fhiro2.derive.constants import NORMAL_DPG, NORMAL_TEMPERATURE, RESPIRATORY_QUOTIENT, STANDARD_PH
-from fhiro2.derive.dissociation import saturation
-from fhiro2.derive.doubt import suspect
+from fhiro2.derive.dissociation import saturation, saturation_gap
+from fhiro2.derive.doubt import fractions_disagree, suspect
 from fhiro2.derive.operand import Guard, Mark, Operand, derive, exact, fixed, read, within
 from fhiro2.model import AnchorTable, Caution, Column, Floats, Timelines, Why
 from fhiro2.settings import Settings
@@ -23,7 +23,7 @@ _LOW_BAROMETER = 670.0
 def add_exchange(arterial: AnchorTable, pulse: AnchorTable, timelines: Timelines, settings: Settings) -> None:
     """Gas exchange at arterial samples and pulse oximeter readings (in place)."""
     _gas_exchange(arterial, settings)
-    _predicted(arterial, timelines, settings)
+    _saturations(arterial, timelines, settings)
     _pulse(pulse)
 
 
@@ -86,10 +86,22 @@ def _pulse(table: AnchorTable) -> None:
     )
 
 
-def _predicted(table: AnchorTable, timelines: Timelines, settings: Settings) -> None:
-    """Predicted saturation; a shift that was not measured is standard, doubtful and named."""
+def _saturations(table: AnchorTable, timelines: Timelines, settings: Settings) -> None:
+    """The saturation predicted by the curve, and how far the measured one and SpO2 lie from it."""
+    curve = _curve_operands(table, settings)
+    infant = age(table, timelines) < YEAR / 2
+    guards = [within(curve[0], 5, 700), Guard(infant, Why.AGE_EXCLUDES)]
+    derive(table, "saturation-predicted", _predicted, curve, guards, constants=_CURVE_BASIS)
+    measured, pulse = read(table, "sao2"), read(table, "spo2")
+    disagreeing = Guard(fractions_disagree(measured.column), Why.SUSPECT_SAMPLE)
+    guards = [*guards, suspect(table)]
+    derive(table, "saturation-gap-measured", _gap, [measured, *curve], [*guards, disagreeing], constants=_CURVE_BASIS)
+    derive(table, "saturation-gap-pulse", _gap, [pulse, *curve], guards, constants=_CURVE_BASIS)
+
+
+def _curve_operands(table: AnchorTable, settings: Settings) -> list[Operand]:
+    """The arguments of ``_on_curve``; a shift that was not measured is standard, doubtful and named."""
     count = len(table.reading)
-    pressure = read(table, "pao2")
     shifts = [
         _or_standard(table, name, standard, doubt)
         for name, standard, doubt in (
@@ -104,22 +116,22 @@ def _predicted(table: AnchorTable, timelines: Timelines, settings: Settings) -> 
     if not settings.assume_dpg:
         dpg.column.why[:] = Why.NEVER_RECORDED
     body = exact(np.full(count, NORMAL_TEMPERATURE.value), np.zeros(count))
+    return [read(table, "pao2"), *shifts, dpg, body]
 
-    def predicted(
-        pressure: Floats, ph: Floats, pco2: Floats, cohb: Floats, methb: Floats, dpg: Floats, body: Floats
-    ) -> Floats:
-        carboxy, met = np.clip(cohb, 0.0, 0.9), np.clip(methb, 0.0, 0.9)
-        return 100.0 * saturation(pressure, ph, pco2, body, dpg, carboxy, met, np.zeros_like(ph))
 
-    infant = age(table, timelines) < YEAR / 2
-    derive(
-        table,
-        "saturation-predicted",
-        predicted,
-        [pressure, *shifts, dpg, body],
-        [within(pressure, 5, 700), Guard(infant, Why.AGE_EXCLUDES)],
-        constants=_CURVE_BASIS,
-    )
+def _on_curve(
+    pressure: Floats, ph: Floats, pco2: Floats, cohb: Floats, methb: Floats, dpg: Floats, body: Floats
+) -> Floats:
+    carboxy, met = np.clip(cohb, 0.0, 0.9), np.clip(methb, 0.0, 0.9)
+    return saturation(pressure, ph, pco2, body, dpg, carboxy, met, np.zeros_like(ph))
+
+
+def _predicted(*curve: Floats) -> Floats:
+    return 100.0 * _on_curve(*curve)
+
+
+def _gap(observed: Floats, *curve: Floats) -> Floats:
+    return saturation_gap(observed, _on_curve(*curve))
 
 
 def _or_standard(table: AnchorTable, name: str, standard: float, doubt: float) -> Operand:

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from fhiro2.derive.constants import ORDINARY_CARDIAC_INDEX, ORDINARY_CONSUMPTION_INDEX
 from fhiro2.model import Floats
 
 
@@ -28,6 +29,19 @@ def extraction_ratio(arterial: Floats, venous: Floats) -> Floats:
     Source: definition, from the principle of Fick A, 1870.
     """
     return (arterial - venous) / arterial
+
+
+def extraction_excess(arterial: Floats, venous: Floats) -> Floats:
+    """How much more of the delivered oxygen tissues take than expected for this arterial content; a fraction, signed.
+
+    ``arterial`` and mixed ``venous`` contents in mL/dL, of one patient and one moment. Expected is what an ordinary
+    consumption index takes from the delivery at an ordinary cardiac index, so that low haemoglobin alone is no excess.
+
+    Source: definition, from the principle of Fick A, 1870; what is ordinary stands in ``constants``. Assumes: an
+    adult at rest.
+    """
+    expected = ORDINARY_CONSUMPTION_INDEX.value / (10.0 * ORDINARY_CARDIAC_INDEX.value * arterial)
+    return extraction_ratio(arterial, venous) - expected
 
 
 def index(quantity: Floats, surface: Floats) -> Floats:

@@ -66,7 +66,7 @@ def _known(condition: Condition, table: AnchorTable, place: int) -> Sequence[str
 
 def _evidence(name: str, timelines: Timelines, table: AnchorTable, place: int) -> Evidence:
     column = table.columns[name]
-    reading, derived = int(column.source[place]), ""
+    reading, derived = int(column.source[place]), "" if column.derived is None else str(column.derived[place])
     if reading < 0:
         reading, derived = int(table.reading[place]), name
     age = int(table.effective[place]) - int(timelines.readings["effective"][reading])

@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from typing import get_args
+
 import numpy as np
 
 from fhiro2.catalogue import INPUT_BY_NAME, MEASURED_BY_NAME, QUANTITY
@@ -22,7 +24,7 @@ from fhiro2.model import (
 )
 from fhiro2.pair.sample import in_sample, leads
 from fhiro2.pair.search import NOBODY, Choice, Keys, keys, latest, nearest, within
-from fhiro2.settings import Settings, Windows
+from fhiro2.settings import ContextFact, Settings, Windows
 
 ARTERIAL, MIXED, CENTRAL = "arterial", "mixed-venous", "central-venous"
 PULSE, OUTPUT, BODY = "pulse-oximetry", "cardiac-output", "body"
@@ -30,7 +32,7 @@ _ALIVE = ("peep", "paw_mean", "vt", "vt_set", "rr_vent_set", "rr_vent_total")
 _STALE = 0.098  # relative doubt that a day adds to a haemoglobin (2 % at once, 10 % after a day: project's judgement)
 _CHANGE = 0.005  # inspired oxygen: less than this is no change
 _APART = 0.30  # two gases of one minute that differ by more are discordant
-_FACTS = ("ecmo", "intracardiac-shunt", "transfusion-or-bleed")
+_FACTS: tuple[str, ...] = get_args(ContextFact)
 _BLOODS = {ARTERIAL: Specimen.ARTERIAL, MIXED: Specimen.MIXED_VENOUS, CENTRAL: Specimen.CENTRAL_VENOUS}
 _SAMPLE_INPUTS = {
     ARTERIAL: ("pao2", "paco2", "pha", "hco3a", "sao2", "fo2hba", "fcohb", "fmethb", "hb", "lactate"),
@@ -56,6 +58,7 @@ def tables(timelines: Timelines, settings: Settings) -> dict[str, AnchorTable]:
     pairing.in_force(arterial, "peep")
     for table in (arterial, made[OUTPUT], made[BODY]):
         pairing.body(table)
+    pairing.body_at_output(arterial)
     for table in made.values():
         _state_facts(table, timelines)
     return {kind: _cut(table, timelines) for kind, table in made.items()}
@@ -132,10 +135,20 @@ class _Pairing:
 
     def body(self, table: AnchorTable) -> None:
         """Weight and height on record."""
-        for name, window in (("weight", self.windows.weight), ("height", self.windows.height)):
+        for name in ("weight", "height"):
             if name not in table.columns:
-                choice = latest(self.keyed, self._stream(name), self._at(table), _micro(window))
-                table.columns[name] = self._column(table, choice, name)
+                table.columns[name] = self._on_record(table, name, self._at(table))
+
+    def body_at_output(self, table: AnchorTable) -> None:
+        """Weight and height on record at the cardiac output of each anchor, as ``weight_co`` and ``height_co``."""
+        flow = table.columns["co"]
+        at = np.where(flow.known(), self.keyed.of[np.maximum(flow.source, 0)], self._at(table))
+        for name in ("weight", "height"):
+            table.columns[f"{name}_co"] = self._on_record(table, name, at)
+
+    def _on_record(self, table: AnchorTable, name: str, at: Integers) -> Column:
+        window = {"weight": self.windows.weight, "height": self.windows.height}[name]
+        return self._column(table, latest(self.keyed, self._stream(name), at, _micro(window)), name)
 
     def _earlier_haemoglobin(self, table: AnchorTable) -> None:
         """Where the sample has no haemoglobin of its own, the latest before it."""
@@ -164,6 +177,7 @@ class _Pairing:
         at, windows = self._at(table), self.windows
         for name, quantity, minutes in (
             ("co", "co", windows.cardiac_output),
+            ("ci", "ci", windows.cardiac_output),
             ("temp", "temp_core", windows.temperature),
             ("spo2", "spo2", windows.pulse_oximetry),
         ):
