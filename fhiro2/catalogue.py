@@ -35,7 +35,8 @@ class Measured:
 class Derived:
     """A quantity that is computed. ``unit`` is what is written; ``loinc`` is added where a term truly fits.
 
-    ``formula`` names the equation and its version; ``source`` is where the equation was published.
+    ``formula`` names the equation and its version; ``source`` is where the equation was published; ``signed`` says that
+    it can be less than 0.
     """
 
     code: str
@@ -47,6 +48,7 @@ class Derived:
     loinc: str = ""
     loinc_name: str = ""
     category: str = "laboratory"
+    signed: bool = False
 
 
 MEASURED: tuple[Measured, ...] = (
@@ -181,6 +183,7 @@ DERIVED: tuple[Derived, ...] = (
         1,
         "content-difference/1",
         _CONTENT,
+        signed=True,
     ),
     Derived(
         "oxygen-content-difference-central",
@@ -189,6 +192,7 @@ DERIVED: tuple[Derived, ...] = (
         1,
         "content-difference/1",
         _CONTENT,
+        signed=True,
     ),
     Derived("oxygen-delivery", "Oxygen delivery", "mL/min", 0, "oxygen-delivery/1", _CONTENT, category="exam"),
     Derived(
@@ -229,7 +233,9 @@ DERIVED: tuple[Derived, ...] = (
         "extraction-ratio/1",
         _FICK,
     ),
-    Derived("alveolar-oxygen-pressure", "Alveolar oxygen pressure", "mm[Hg]", 0, "alveolar-air/1", _ALVEOLAR),
+    Derived(
+        "alveolar-oxygen-pressure", "Alveolar oxygen pressure", "mm[Hg]", 0, "alveolar-air/1", _ALVEOLAR, signed=True
+    ),
     Derived(
         "alveolar-arterial-gradient",
         "Alveolar-arterial oxygen gradient",
@@ -239,6 +245,7 @@ DERIVED: tuple[Derived, ...] = (
         _ALVEOLAR,
         "19991-9",
         "Alveolar-arterial oxygen Partial pressure difference",
+        signed=True,
     ),
     Derived(
         "pf-ratio",
