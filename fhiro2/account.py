@@ -11,7 +11,7 @@ from fhiro2.errors import Bucket, Reason, StopError
 
 @dataclass
 class Account:
-    """Counts over one run. ``reasons`` counts resources by bucket and reason, ``parts`` components, ``held`` patients."""
+    """Counts over one run: resources by bucket and reason, ``parts`` components, ``held`` patients."""
 
     buckets: Counter[Bucket] = field(default_factory=Counter)
     reasons: Counter[tuple[Bucket, Reason]] = field(default_factory=Counter)

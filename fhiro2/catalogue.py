@@ -35,7 +35,8 @@ class Measured:
 class Derived:
     """A quantity that is computed. ``unit`` is what is written; ``loinc`` is added where a term truly fits.
 
-    ``formula`` names the equation and its version; ``source`` is where the equation was published.
+    ``formula`` names the equation and its version; ``source`` is where the equation was published; ``signed`` says that
+    it can be less than 0.
     """
 
     code: str
@@ -47,6 +48,7 @@ class Derived:
     loinc: str = ""
     loinc_name: str = ""
     category: str = "laboratory"
+    signed: bool = False
 
 
 MEASURED: tuple[Measured, ...] = (
@@ -182,6 +184,7 @@ DERIVED: tuple[Derived, ...] = (
         1,
         "content-difference/1",
         _CONTENT,
+        signed=True,
     ),
     Derived(
         "oxygen-content-difference-central",
@@ -190,6 +193,7 @@ DERIVED: tuple[Derived, ...] = (
         1,
         "content-difference/1",
         _CONTENT,
+        signed=True,
     ),
     Derived("oxygen-delivery", "Oxygen delivery", "mL/min", 0, "oxygen-delivery/1", _CONTENT, category="exam"),
     Derived(
@@ -238,7 +242,9 @@ DERIVED: tuple[Derived, ...] = (
         "extraction-ratio/1",
         _FICK,
     ),
-    Derived("alveolar-oxygen-pressure", "Alveolar oxygen pressure", "mm[Hg]", 0, "alveolar-air/1", _ALVEOLAR),
+    Derived(
+        "alveolar-oxygen-pressure", "Alveolar oxygen pressure", "mm[Hg]", 0, "alveolar-air/1", _ALVEOLAR, signed=True
+    ),
     Derived(
         "alveolar-arterial-gradient",
         "Alveolar-arterial oxygen gradient",
@@ -248,6 +254,7 @@ DERIVED: tuple[Derived, ...] = (
         _ALVEOLAR,
         "19991-9",
         "Alveolar-arterial oxygen Partial pressure difference",
+        signed=True,
     ),
     Derived(
         "pf-ratio",

@@ -5,7 +5,6 @@ from __future__ import annotations
 from dataclasses import dataclass
 from enum import StrEnum
 
-
 AxisState = tuple[str, str, str]
 """A link of the oxygen chain at an anchor: its name, its state (met, not met, not assessable), and why."""
 
@@ -65,7 +64,8 @@ class TurnKind(StrEnum):
 class Turn:
     """One turn of an episode, with the values that brought it as they stood then.
 
-    ``probability`` is that of what the rule finds, None and ``message`` '' where it was cleared. ``axes`` says of each link of the oxygen chain how it stood.
+    ``probability`` is that of what the rule finds, None and ``message`` '' where it was cleared. ``axes`` says of each
+    link of the oxygen chain how it stood.
     """
 
     kind: TurnKind

@@ -7,6 +7,7 @@ unit of their quantity (``catalogue.MEASURED``); unknown is NaN or -1.
 
 from __future__ import annotations
 
+from collections.abc import Iterable
 from dataclasses import dataclass, field
 from enum import IntEnum, IntFlag, auto
 from typing import Any
@@ -264,6 +265,18 @@ class AnchorTable:
     known: Integers
     columns: dict[str, Column] = field(default_factory=dict)
     facts: dict[str, NDArray[np.int8]] = field(default_factory=dict)
+
+    def at(self, places: Any, names: Iterable[str] | None = None) -> AnchorTable:
+        """The anchors ``places`` (numbers or truths) with columns of readings: all of them, or those in ``names``."""
+        return AnchorTable(
+            self.kind,
+            self.reading[places],
+            self.patient[places],
+            self.effective[places],
+            self.known[places],
+            {name: pick(self.columns[name], places) for name in (self.columns if names is None else names)},
+            {fact: state[places] for fact, state in self.facts.items()},
+        )
 
 
 @dataclass

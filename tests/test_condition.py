@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import sqlite3
+from itertools import combinations
 
 import numpy as np
 import pytest
@@ -17,8 +18,12 @@ from fhiro2.judge.condition import (
     AnyOf,
     Comparison,
     Condition,
+    Finding,
     Not,
+    NotKnown,
     Operator,
+    SomeOf,
+    _counted,
     comparison,
     evaluate,
     quantities,
@@ -55,16 +60,26 @@ def truth_of(condition: Condition, **columns: Column) -> list[int]:
 # --- three-valued logic ------------------------------------------------------------------------------------------
 # The tables of Kleene 1952, section 64, are those of SQL's AND, OR and NOT with NULL: SQLite is the other computer.
 
-LEAF = st.sampled_from([Comparison(name, Operator.BELOW, 1.0) for name in NAMES])
-TREE = st.recursive(
-    LEAF,
-    lambda part: st.one_of(
-        st.lists(part, min_size=1, max_size=3).map(lambda parts: AnyOf(tuple(parts))),
-        st.lists(part, min_size=1, max_size=3).map(lambda parts: AllOf(tuple(parts))),
-        part.map(Not),
-    ),
-    max_leaves=8,
-)
+
+def some_of(parts: list[Condition]) -> st.SearchStrategy[Condition]:
+    return st.integers(1, len(parts)).map(lambda least: SomeOf(least, tuple(parts)))
+
+
+def trees(leaf: st.SearchStrategy[Condition]) -> st.SearchStrategy[Condition]:
+    return st.recursive(
+        leaf,
+        lambda part: st.one_of(
+            st.lists(part, min_size=1, max_size=3).map(lambda parts: AnyOf(tuple(parts))),
+            st.lists(part, min_size=1, max_size=3).map(lambda parts: AllOf(tuple(parts))),
+            st.lists(part, min_size=1, max_size=4).flatmap(some_of),
+            part.map(Not),
+        ),
+        max_leaves=8,
+    )
+
+
+BELOW_ONE = [Comparison(name, Operator.BELOW, 1.0) for name in NAMES]
+TREE = trees(st.sampled_from([*BELOW_ONE, *map(NotKnown, NAMES)]))
 STATE = {TRUE: 0.0, FALSE: 2.0, UNKNOWN: NAN}
 SQL = {TRUE: 1, FALSE: 0, UNKNOWN: None}
 
@@ -73,12 +88,17 @@ def as_sql(condition: Condition) -> str:
     match condition:
         case Comparison():
             return condition.quantity
+        case NotKnown():
+            return f"({condition.quantity} IS NULL)"
         case Not():
             return f"(NOT {as_sql(condition.part)})"
         case AnyOf():
             return "(" + " OR ".join(as_sql(part) for part in condition.parts) + ")"
         case AllOf():
             return "(" + " AND ".join(as_sql(part) for part in condition.parts) + ")"
+        case SomeOf():
+            chosen = combinations(condition.parts, condition.least)
+            return as_sql(AnyOf(tuple(AllOf(parts) for parts in chosen)))
 
 
 @given(TREE)
@@ -110,6 +130,31 @@ def test_a_true_finding_holds_more_likely_than_not(condition: Condition, values:
     """By definition of a symmetric doubt: a comparison and its probability lie on the same side of one half."""
     found = evaluate(condition, {name: column([value]) for name, value in zip(NAMES, values, strict=True)})
     assert (found.probability[0] - 0.5) * (found.truth[0] - 0.5) >= 0
+
+
+COMPARISON = st.builds(
+    Comparison,
+    st.sampled_from(NAMES),
+    st.sampled_from(Operator),
+    st.sampled_from([-1.0, 0.0, 0.5, 1.0]),
+    st.sampled_from([0.5, 0.8, 0.95]),
+)
+VALUE = st.sampled_from([NAN, -2.0, -1.0, 0.0, 0.2, 0.5, 0.7, 1.0, 3.0])
+DOUBT = st.sampled_from([NAN, 0.0, 0.1, 1.0])
+COMPLETIONS = np.array([(value, doubt) for value in np.linspace(-2, 2, 21) for doubt in (NAN, 0.0, 0.1, 0.5, 2.0)])
+
+
+@given(trees(COMPARISON), st.lists(st.tuples(VALUE, DOUBT), min_size=3, max_size=3), st.sampled_from(NAMES))
+def test_without_a_value_it_is_only_what_it_is_with_every_value(
+    condition: Condition, values: list[tuple[float, float]], deleted: str
+) -> None:
+    """Kleene 1952, section 64: regular tables. What is found without a value stands whatever the value would be."""
+    rows = 1 + len(COMPLETIONS)
+    columns = {name: column([one] * rows, doubt) for name, (one, doubt) in zip(NAMES, values, strict=True)}
+    columns[deleted] = column(np.r_[NAN, COMPLETIONS[:, 0]], np.r_[NAN, COMPLETIONS[:, 1]])
+    without, *completed = evaluate(condition, columns).truth.tolist()
+    if without != UNKNOWN:
+        assert set(completed) == {without}
 
 
 def test_missing_is_reported_only_for_what_decides() -> None:
@@ -156,6 +201,52 @@ def test_haemoglobin_by_amount() -> None:
     assert comparison("hb", Operator.BELOW, 4.3, "mmol/L").limit == 6.9
 
 
+# --- certainty and what is not known -----------------------------------------------------------------------------
+
+
+@pytest.mark.parametrize(
+    ("value", "uncertainty", "expected"),
+    [
+        (6.8, 0.1, TRUE),  # 2 standard uncertainties below: 0.977 by the normal table
+        (6.8, 0.125, FALSE),  # 1.60: 0.945
+        (6.8, 0.12, TRUE),  # 1.67: 0.952
+        (7.2, 0.1, FALSE),
+        (6.8, 0.0, TRUE),
+        (1.0, NAN, FALSE),  # nothing is known of its doubt
+        (NAN, NAN, UNKNOWN),
+    ],
+)
+def test_a_comparison_with_certainty_is_true_only_beyond_doubt(
+    value: float, uncertainty: float, expected: int
+) -> None:
+    """One-sided 0.95 is 1.645 standard uncertainties (normal table)."""
+    low = Comparison("hb", Operator.BELOW, 7.0, 0.95)
+    assert truth_of(low, hb=column([value], uncertainty)) == [expected]
+    assert truth_of(Comparison("hb", Operator.ABOVE, -7.0, 0.95), hb=column([-value], uncertainty)) == [expected]
+    assert truth_of(Not(low), hb=column([value], uncertainty)) == [UNKNOWN if expected == UNKNOWN else TRUE - expected]
+
+
+def test_too_little_certainty_leaves_the_probability_as_it_is() -> None:
+    """0.8413 one standard uncertainty below the limit (normal table)."""
+    found = evaluate(Comparison("hb", Operator.BELOW, 7.0, 0.95), {"hb": column([6.9], 0.1)})
+    assert found.truth.tolist() == [FALSE]
+    assert found.probability[0] == pytest.approx(0.8413, abs=5e-5)
+    assert not found.missing["hb"].any()
+
+
+def test_a_bound_that_decides_is_certain() -> None:
+    bounds = column([NAN, NAN], NAN, [0, 50], [40, 70])
+    assert truth_of(Comparison("pao2", Operator.BELOW, 60.0, 0.99), pao2=bounds) == [TRUE, UNKNOWN]
+
+
+def test_not_known_is_true_or_false_and_certain() -> None:
+    """By definition: a value or a bound is known, also a bound too wide to decide a comparison."""
+    found = evaluate(NotKnown("pao2"), {"pao2": column([NAN, 50, NAN], NAN, [NAN, 50, 0], [NAN, 50, 90])})
+    assert found.truth.tolist() == [TRUE, FALSE, FALSE]
+    assert found.probability.tolist() == [1, 0, 0]
+    assert found.missing["pao2"].tolist() == [False, False, False]
+
+
 # --- bounds ------------------------------------------------------------------------------------------------------
 
 
@@ -183,6 +274,7 @@ def test_a_value_said_to_be_known_without_number_is_unknown() -> None:
     hollow = column([NAN])
     hollow.why[:] = Why.KNOWN
     assert truth_of(Comparison("pao2", Operator.BELOW, 60.0), pao2=hollow) == [UNKNOWN]
+    assert truth_of(NotKnown("pao2"), pao2=hollow) == [TRUE]
 
 
 # --- probability -------------------------------------------------------------------------------------------------
@@ -204,6 +296,58 @@ def test_probability_of_groups() -> None:
     assert least[0] == pytest.approx(0.8413, abs=5e-5)
     assert most.tolist() == pytest.approx([0.9772, 0.9772], abs=5e-5)
     assert evaluate(Not(parts[0]), columns).probability[0] == pytest.approx(0.0228, abs=5e-5)
+
+
+PARTS = st.lists(COMPARISON, min_size=1, max_size=4).map(tuple)
+STATES = st.lists(st.tuples(VALUE, DOUBT), min_size=3, max_size=3)
+
+
+def likely(condition: Condition, states: list[tuple[float, float]]) -> tuple[int, float]:
+    columns = {name: column([value], doubt) for name, (value, doubt) in zip(NAMES, states, strict=True)}
+    found = evaluate(condition, columns)
+    assert np.isnan(found.probability[0]) == (found.truth[0] == UNKNOWN)
+    return int(found.truth[0]), float(found.probability[0])
+
+
+@given(PARTS, STATES)
+def test_one_of_them_is_any_and_each_of_them_is_all(
+    parts: tuple[Condition, ...], states: list[tuple[float, float]]
+) -> None:
+    """Any is as likely as its likeliest known part, all as its least likely known part."""
+    known = [chance for truth, chance in (likely(part, states) for part in parts) if truth != UNKNOWN]
+    for least, group, bound in ((1, AnyOf(parts), max), (len(parts), AllOf(parts), min)):
+        truth, chance = likely(SomeOf(least, parts), states)
+        np.testing.assert_equal((truth, chance), likely(group, states))
+        assert truth == UNKNOWN or chance == bound(known)
+
+
+@given(PARTS, st.data())
+def test_not_some_is_some_not(parts: tuple[Condition, ...], data: st.DataObject) -> None:
+    """De Morgan: that fewer than k of n hold is that at least n - k + 1 do not."""
+    states, least = data.draw(STATES), data.draw(st.integers(1, len(parts)))
+    dual = SomeOf(len(parts) - least + 1, tuple(map(Not, parts)))
+    np.testing.assert_allclose(likely(Not(SomeOf(least, parts)), states), likely(dual, states), rtol=0, atol=1e-12)
+
+
+@given(st.lists(st.integers(0, 20), min_size=1, max_size=5), st.data())
+def test_probability_of_some_is_exact_where_doubts_rise_and_fall_together(
+    twentieths: list[int], data: st.DataObject
+) -> None:
+    """By definition: with one uniform number for all, the share of numbers that lie below at least k probabilities."""
+    least = data.draw(st.integers(1, len(twentieths)))
+    parts = [Finding(np.array([int(one > 10)], np.int8), np.array([one / 20]), {}) for one in twentieths]
+    share = sum(sum(number < one for one in twentieths) >= least for number in range(20)) / 20
+    assert _counted(parts, least).probability[0] == pytest.approx(share, abs=1e-12)
+
+
+def test_a_part_that_is_unknown_lends_a_group_no_probability() -> None:
+    """All of (0.9772, unknown) may be 0: any of it and 0.8413 is at least 0.8413, not 0.9772."""
+    doubtful = AllOf((Comparison("hb", Operator.BELOW, 7.0), Comparison("pao2", Operator.BELOW, 60.0)))
+    either = AnyOf((doubtful, Comparison("sao2", Operator.BELOW, 0.9)))
+    columns = {"hb": column([6.8], 0.1), "pao2": column([NAN]), "sao2": column([0.88], 0.02)}
+    found = evaluate(either, columns)
+    assert found.truth.tolist() == [TRUE]
+    assert found.probability[0] == pytest.approx(0.8413, abs=5e-5)
 
 
 def test_a_value_of_unknown_doubt_is_not_called_certain() -> None:

@@ -32,7 +32,6 @@ from fhiro2.model import (
     Patient,
     Timelines,
     Why,
-    pick,
 )
 from fhiro2.packaged import rules_folder
 from fhiro2.settings import ContextFact
@@ -101,14 +100,6 @@ def laid_out(points: Sequence[Point], born: Sequence[int | None]) -> tuple[Timel
     return timelines, AnchorTable("arterial", rows, patient, effective, effective, columns, facts)
 
 
-def kept(table: AnchorTable, keep: NDArray[np.bool_]) -> AnchorTable:
-    columns = {name: pick(one, keep) for name, one in table.columns.items()}
-    facts = {fact: state[keep] for fact, state in table.facts.items()}
-    return AnchorTable(
-        table.kind, table.reading[keep], table.patient[keep], table.effective[keep], table.known[keep], columns, facts
-    )
-
-
 def adults(number: int) -> list[int | None]:
     return [START - 60 * 366 * DAY] * number
 
@@ -175,7 +166,7 @@ def test_the_whole_equals_any_cut(
     carried: Carried = {}
     for begin, end in pairwise(edges):
         for mine in (table.patient == apart, table.patient != apart):
-            part = kept(table, mine & (minutes >= begin) & (minutes < end))
+            part = table.at(mine & (minutes >= begin) & (minutes < end))
             before = dict(carried)
             found, after, _ = judge(pack, timelines, {"arterial": part}, carried)
             assert carried == before
@@ -245,9 +236,7 @@ def test_a_flag_freezes_what_raised_it() -> None:
     assert raised.anchor == Cited("north", "Patient/p1", "o0", 2, "1", "")
     assert raised.evidence == (
         Evidence("hb", 6.5, 0.1, "g/dL", 5 * MINUTE, Cited("north", "Patient/p1", "o3", -1, "1", "")),
-        Evidence(
-            "oxygen-extraction-ratio", 0.49, 0.02, "1", 0, replace(raised.anchor, derived="oxygen-extraction-ratio")
-        ),
+        Evidence("oxygen-extraction-ratio", 0.49, 0.02, "1", 0, derived),
     )
     assert cleared.evidence == (
         Evidence("hb", 9.0, 0.1, "g/dL", 5 * MINUTE, Cited("north", "Patient/p1", "o5", -1, "1", "")),
@@ -269,7 +258,7 @@ def test_an_anchor_that_is_a_whole_observation_has_no_part() -> None:
 def test_a_carried_episode_keeps_its_flag_and_is_returned_when_cleared() -> None:
     points = [Point(0, 0, {"pao2": 50.0}), Point(0, 30, {"pao2": 45.0}), Point(0, 60, {"pao2": 90.0})]
     timelines, table = laid_out(points, adults(1))
-    parts = [kept(table, table.reading == place) for place in range(3)]
+    parts = [table.at(table.reading == place) for place in range(3)]
     first, carried, _ = judge(PACK, timelines, {"arterial": parts[0]}, {})
     nothing, still, _ = judge(PACK, timelines, {"arterial": parts[1]}, carried)
     last, closed, _ = judge(PACK, timelines, {"arterial": parts[2]}, still)

@@ -4,8 +4,9 @@ from pathlib import Path
 
 import pytest
 
+from fhiro2.catalogue import title_of
 from fhiro2.judge import read_pack
-from fhiro2.judge.rulefile import Clause
+from fhiro2.judge.clause import Clause
 from fhiro2.judge.words import _clause, told
 from fhiro2.packaged import rules_folder
 
@@ -20,7 +21,8 @@ def test_everything_a_reader_needs_is_told(rule) -> None:  # type: ignore[no-unt
     assert rule.intent in text
     assert rule.owner in text
     for quantity, unit in (*rule.raise_when.units(), *rule.clear_when.units()):
-        assert unit.replace("mm[Hg]", "mmHg") in text or unit == "1", quantity
+        told_so = f"{title_of(quantity)} not known" in text
+        assert unit.replace("mm[Hg]", "mmHg") in text or unit == "1" or told_so, quantity
 
 
 def test_nested_groups_are_indented() -> None:
@@ -38,6 +40,27 @@ def test_nested_groups_are_indented() -> None:
         "  this does not hold:",
         "    any of these holds:",
         "      PaO2 at least 60 mmHg",
+    ]
+
+
+def test_some_certainty_and_unknown_are_told() -> None:
+    clause = Clause.model_validate(
+        {
+            "some": {
+                "least": 2,
+                "of": (
+                    {"quantity": "hb", "below": 70, "unit": "g/L", "certainty": 0.975},
+                    {"quantity": "lactate", "above": 4, "unit": "mmol/L"},
+                    {"unknown": "cardiac-index"},
+                ),
+            }
+        }
+    )
+    assert list(_clause(clause)) == [
+        "at least 2 of these 3 hold:",
+        "  haemoglobin below 70 g/L, with a probability of at least 97.5 %",
+        "  lactate above 4 mmol/L",
+        "  Cardiac index not known",
     ]
 
 

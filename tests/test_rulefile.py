@@ -8,7 +8,8 @@ from pathlib import Path
 import pytest
 
 from fhiro2.errors import StopError
-from fhiro2.judge.condition import AllOf, AnyOf, Comparison, Not, Operator
+from fhiro2.judge import check_pack
+from fhiro2.judge.condition import AllOf, AnyOf, Comparison, Not, NotKnown, Operator, SomeOf
 from fhiro2.judge.rulefile import read_pack, read_rule
 
 RULE = """\
@@ -46,6 +47,8 @@ cases:
     expect: unknown
 """
 
+GROUP = "    - not: {quantity: hb, at_least: 70, unit: g/L}\n"
+SOME = "some: {{least: {}, of: [{{quantity: pao2, below: 8, unit: kPa}}, {{unknown: sao2}}]}}"
 FAULTS: dict[str, tuple[str, str, str, str]] = {
     # what is replaced, by what, where the fault is then found, what is said of it
     "unknown key": ("title:", "titel: x\ntitle:", "x\ntitle", "Extra inputs"),
@@ -73,6 +76,45 @@ FAULTS: dict[str, tuple[str, str, str, str]] = {
     "wrong dimension": ("below: 8, unit: kPa", "below: 8, unit: g/L", "{quantity: pao2, below", "unit of pao2"),
     "unknown unit": ("below: 8, unit: kPa", "below: 8, unit: kpa", "{quantity: pao2, below", "unit of pao2"),
     "unknown quantity": ("quantity: hb", "quantity: hbb", "{quantity: hbb", "write one of hb"),
+    "certainty without a comparison": (
+        "{quantity: pao2, below: 8, unit: kPa}",
+        "{quantity: pao2, unit: kPa, certainty: 0.95}",
+        "{quantity: pao2, unit",
+        "may have a certainty",
+    ),
+    "certainty of no more than even": ("below: 8,", "below: 8, certainty: 0.5,", "0.5, unit", "greater than 0.5"),
+    "certainty of a percentage": ("below: 8,", "below: 8, certainty: 95,", "95, unit", "less than 1"),
+    "certainty that nothing has": ("below: 8,", "below: 8, certainty: 1,", "1, unit", "less than 1"),
+    "certainty of a group": (GROUP, f"{GROUP}  certainty: 0.9\n", "any:\n", "stands alone"),
+    "some without a number": (
+        "{quantity: pao2, below: 8, unit: kPa}",
+        "some: {of: [{quantity: pao2, below: 8, unit: kPa}]}",
+        "{of:",
+        "least: Field required",
+    ),
+    "none of some": ("{quantity: pao2, below: 8, unit: kPa}", SOME.format(0), "0, of", "write a number from 1 to 2"),
+    "three of two": ("{quantity: pao2, below: 8, unit: kPa}", SOME.format(3), "3, of", "write a number from 1 to 2"),
+    "fault within some": (
+        "{quantity: pao2, below: 8, unit: kPa}",
+        SOME.format(2).replace("unknown: sao2", "unknown: sao3"),
+        "{unknown: sao3",
+        "write one of sao2",
+    ),
+    "unknown of no quantity": ("quantity: hb, at_least: 70, unit: g/L", "unknown: hbb", "{unknown", "write one of hb"),
+    "unknown beside a limit": ("quantity: hb,", "unknown: hb, quantity: hb,", "{unknown", "stands alone"),
+    "always true": (
+        "not: {quantity: hb, at_least: 70, unit: g/L}",
+        "{quantity: pao2, at_least: 8, unit: kPa}",
+        "any:\n",
+        "true whatever",
+    ),
+    "never true": ("at_least: 8.7, unit: kPa", "at_least: 870, unit: kPa", "all:\n", "never true"),
+    "true where nothing is known": (
+        "not: {quantity: hb, at_least: 70, unit: g/L}",
+        "unknown: hb",
+        "any:\n",
+        "no evidence",
+    ),
     "group beside a limit": ("  any:\n", "  quantity: pao2\n  any:\n", "quantity: pao2\n", "stands alone"),
     "empty group": (
         "  all:\n    - {quantity: pao2, at_least: 8.7, unit: kPa}",
@@ -177,6 +219,61 @@ def test_each_fault_is_named_with_its_place(fault: str, tmp_path: Path) -> None:
     places = [one for one in str(caught.value).splitlines() if one.startswith(f"{path}:{line}:{column}: ")]
     assert places, f"{caught.value} should be at {line}:{column}"
     assert said in "\n".join(places)
+
+
+EVERY_FORM = """\
+  some:
+    least: 2
+    of:
+      - {quantity: pao2, below: 8, unit: kPa, certainty: 0.95}
+      - {quantity: hb, below: 70, unit: g/L}
+      - unknown: cardiac-index
+"""
+
+
+def test_some_certainty_and_unknown_are_read(tmp_path: Path) -> None:
+    begin, end = RULE.index("  any:"), RULE.index("clear:")
+    text = RULE[:begin] + EVERY_FORM + RULE[end:]
+    rule = read_rule(written(tmp_path, text))
+    certain = Comparison("pao2", Operator.BELOW, 60.0, 0.95)
+    low = Comparison("hb", Operator.BELOW, 7.0)
+    assert rule.raises == SomeOf(2, (certain, low, NotKnown("cardiac-index")))
+    assert rule.units == {"pao2": "kPa", "hb": "g/L", "cardiac-index": "L/min/m2"}
+    assert read_pack(tmp_path).hash != read_pack(written(tmp_path / "other", text.replace("0.95", "0.9")).parent).hash
+
+
+def test_a_quantity_asked_whether_it_is_known_keeps_the_unit_of_its_comparison(tmp_path: Path) -> None:
+    low = "    - {quantity: pao2, below"
+    text = RULE.replace(low, "    - all: [{unknown: pao2}, {quantity: hb, below: 9, unit: g/dL}]\n" + low)
+    assert read_rule(written(tmp_path, text)).units == {"hb": "g/dL", "pao2": "kPa"}
+
+
+def test_cases_give_and_leave_out_what_a_rule_asks_whether_it_is_known(tmp_path: Path) -> None:
+    """The flag needs the index to be missing; with an index given, or a pressure within its doubt, there is none."""
+    begin, end = RULE.index("  any:"), RULE.index("clear:")
+    raising = "  all:\n    - {quantity: pao2, below: 8, unit: kPa, certainty: 0.95}\n    - unknown: cardiac-index\n"
+    index = "cardiac-index: {value: 2500, unit: mL/min/m2, uncertainty: 300}"
+    more = f"""\
+  - name: index known
+    given: [{{after_minutes: 0, {index}, pao2: {{value: 7, unit: kPa, uncertainty: 0.3}}, age_years: 60}}]
+    expect: none
+  - name: within its doubt
+    given: [{{after_minutes: 0, pao2: {{value: 7.7, unit: kPa, uncertainty: 0.3}}, age_years: 60}}]
+    expect: none
+"""
+    path = written(tmp_path, RULE[:begin] + raising + RULE[end:] + more)
+    assert check_pack(tmp_path, date(2026, 12, 1)).failures == ()
+    path.write_text(path.read_text().replace(", cardiac-index: {value: 2500, unit: mL/min/m2, uncertainty: 300}", ""))
+    (failed,) = check_pack(tmp_path, date(2026, 12, 1)).failures
+    assert "index known" in failed
+
+
+def test_a_fault_within_some_is_not_told_of_its_number_too(tmp_path: Path) -> None:
+    old, new, _, said = FAULTS["fault within some"]
+    with pytest.raises(StopError) as caught:
+        read_rule(written(tmp_path, RULE.replace(old, new)))
+    (line,) = str(caught.value).splitlines()
+    assert said in line
 
 
 def test_byte_faults(tmp_path: Path) -> None:

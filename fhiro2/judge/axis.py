@@ -40,11 +40,12 @@ from fhiro2.judge.condition import (
     leaves,
     quantities,
 )
-from fhiro2.model import AnchorTable, Integers, pick
+from fhiro2.model import AnchorTable, Integers
 
 MET, NOT_MET, NOT_ASSESSABLE = "met", "not met", "not assessable"
 _WORDS: Final = {TRUE: MET, FALSE: NOT_MET, UNKNOWN: NOT_ASSESSABLE}
 _CERTAIN: Final = 0.95  # one-sided, 1.64 standard uncertainties
+
 
 @dataclass(frozen=True)
 class Axis:
@@ -119,13 +120,7 @@ def axis_truths(axis: Axis, table: AnchorTable) -> Truth:
 def axis_states(table: AnchorTable, places: Integers) -> list[tuple[AxisState, ...]]:
     """What a reader is told of the links at each of ``places``: those whose columns the table has, in order."""
     told = [axis for axis in AXES if _quantities(axis) <= table.columns.keys()]
-    names = {name for axis in told for name in _quantities(axis)}
-    here = AnchorTable(
-        table.kind,
-        *(rows[places] for rows in (table.reading, table.patient, table.effective, table.known)),
-        {name: pick(table.columns[name], places) for name in names},
-        {fact: state[places] for fact, state in table.facts.items()},
-    )
+    here = table.at(places, {name for axis in told for name in _quantities(axis)})
     states = [_states(axis, here) for axis in told]
     return [tuple(row) for row in zip(*states, strict=True)] if states else [()] * len(places)
 

@@ -33,8 +33,10 @@ Runs = dict[int, Run | None]
 
 def finding(rule: Rule, timelines: Timelines, table: AnchorTable) -> Finding:
     """What ``rule`` finds at every anchor; ``missing`` also names what of the scope is not known."""
-    doubt = np.full(len(table.reading), np.nan)
-    scope = [Finding(part, doubt, {name: part == UNKNOWN}) for name, part in _scope(rule, timelines, table)]
+    scope = [
+        Finding(part, np.where(part == UNKNOWN, np.nan, part), {name: part == UNKNOWN})
+        for name, part in _scope(rule, timelines, table)
+    ]
     return conjunction([*scope, evaluate(rule.raises, table.columns)])
 
 

@@ -7,19 +7,19 @@ import json
 from collections.abc import Iterator, Mapping
 from dataclasses import dataclass
 from datetime import date
-from difflib import get_close_matches
 from functools import cached_property
 from itertools import pairwise
 from pathlib import Path
 from string import Formatter
-from typing import Annotated, Any, Literal, Self, TypeVar
+from typing import Annotated, Any, Literal, Self
 
-from pydantic import AfterValidator, BaseModel, BeforeValidator, ConfigDict, Field, StringConstraints, model_validator
+from pydantic import BaseModel, BeforeValidator, ConfigDict, Field, StringConstraints, model_validator
 
-from fhiro2.catalogue import DERIVED_BY_CODE, INPUT_BY_NAME
 from fhiro2.documents import Marks, parse, validated
-from fhiro2.errors import SkipError, StopError
-from fhiro2.judge.condition import AllOf, AnyOf, Condition, Not, Operator, canonical, comparison, quantities
+from fhiro2.errors import StopError
+from fhiro2.judge.clause import Clause, Number, Some, check_unit
+from fhiro2.judge.condition import Condition, quantities
+from fhiro2.judge.vacuous import objections
 from fhiro2.settings import ContextFact
 
 TIME = "time"
@@ -27,74 +27,17 @@ SEVERITIES = ("info", "warning", "critical")
 MOST_NEEDED = 3
 """How many other rules a flag may need: joins of five patterns were seen to be unsafe in one evaluator of flags."""
 Place = tuple[str | int, ...]
-Item = TypeVar("Item")
-
-
-def _filled(items: tuple[Item, ...]) -> tuple[Item, ...]:
-    if not items:
-        raise ValueError("an empty list; write at least one")
-    return items
 
 
 def _date(text: Any) -> Any:
     return date.fromisoformat(text) if isinstance(text, str) else text
 
 
-Some = Annotated[tuple[Item, ...], AfterValidator(_filled)]
 Text = Annotated[str, StringConstraints(min_length=1)]
-Number = Annotated[float, Field(allow_inf_nan=False)]
 
 
 class _Frozen(BaseModel):
     model_config = ConfigDict(frozen=True, extra="forbid", strict=True)
-
-
-class Clause(_Frozen):
-    """A node of a condition as written: a group (any, all, not) or a comparison of one quantity."""
-
-    any_of: Some[Clause] | None = Field(None, alias="any")
-    all_of: Some[Clause] | None = Field(None, alias="all")
-    negated: Clause | None = Field(None, alias="not")
-    quantity: str | None = None
-    below: Number | None = None
-    above: Number | None = None
-    at_most: Number | None = None
-    at_least: Number | None = None
-    unit: str | None = None
-
-    @model_validator(mode="after")
-    def _has_one_shape(self) -> Self:
-        given = self.model_fields_set
-        if any(getattr(self, name) is None for name in given):
-            raise ValueError("a key without a value; fill it in or remove it")
-        if given & {"any_of", "all_of", "negated"}:
-            if len(given) > 1:
-                raise ValueError("any, all or not stands alone; nest what is beside it")
-        elif len(given) != 3 or not given > {"quantity", "unit"}:
-            operators = ", ".join(Operator)
-            raise ValueError(f"a comparison needs quantity, unit and one of {operators}")
-        else:
-            _check_unit(str(self.quantity), str(self.unit))
-        return self
-
-    @cached_property
-    def condition(self) -> Condition:
-        """The same in canonical units."""
-        if self.any_of is not None:
-            return AnyOf(tuple(part.condition for part in self.any_of))
-        if self.all_of is not None:
-            return AllOf(tuple(part.condition for part in self.all_of))
-        if self.negated is not None:
-            return Not(self.negated.condition)
-        how = next(one for one in Operator if one in self.model_fields_set)
-        return comparison(str(self.quantity), how, getattr(self, how), str(self.unit))
-
-    def units(self) -> Iterator[tuple[str, str]]:
-        """Each quantity with the unit that it is compared in, in the order written."""
-        if self.quantity is not None and self.unit is not None:
-            yield self.quantity, self.unit
-        for part in (*(self.any_of or ()), *(self.all_of or ()), *((self.negated,) if self.negated else ())):
-            yield from part.units()
 
 
 class AgeLimit(_Frozen):
@@ -288,7 +231,7 @@ def _read(path: Path) -> tuple[Rule, Marks]:
         raise StopError(f"{path}: cannot be read ({error.strerror}); check the path and its rights") from None
     value, marks = parse(content, str(path))
     rule = validated(value, marks, str(path), Rule)
-    mistakes = [*_identity(rule, path.stem), *_message(rule), *_cases(rule)]
+    mistakes = [*_identity(rule, path.stem), *_conditions(rule), *_message(rule), *_cases(rule)]
     if mistakes:
         raise StopError("\n".join(_placed(str(path), marks, place, text) for place, text in mistakes))
     return rule, marks
@@ -304,6 +247,13 @@ def _identity(rule: Rule, stem: str) -> Iterator[tuple[Place, str]]:
         yield ("id",), f"must be the file's name, {stem!r}; rename one of them"
     if rule.worse and SEVERITIES.index(rule.worse.severity) <= SEVERITIES.index(rule.severity):
         yield ("worse", "severity"), f"must be more than the rule's own, {rule.severity}; change one of them"
+
+
+def _conditions(rule: Rule) -> Iterator[tuple[Place, str]]:
+    yield from ((("raise",), text) for text in objections(rule.raises, finds=True))
+    yield from ((("clear",), text) for text in objections(rule.clears, finds=False))
+    if rule.worsens is not None:
+        yield from ((("worse", "when"), text) for text in objections(rule.worsens, finds=True))
 
 
 def _message(rule: Rule) -> Iterator[tuple[Place, str]]:
@@ -337,7 +287,7 @@ def _cases(rule: Rule) -> Iterator[tuple[Place, str]]:
         for step, moment in enumerate(case.given):
             for name, given in moment.values.items():
                 try:
-                    _check_unit(name, given.unit)
+                    check_unit(name, given.unit)
                 except ValueError as error:
                     yield (*place, "given", step, name), f"{error}; change it"
 
@@ -376,14 +326,3 @@ def _given(rule: Rule) -> Iterator[tuple[Place, str]]:
         for step, moment in enumerate(case.given):
             for name in moment.values:
                 yield ("cases", number, "given", step, name), name
-
-
-def _check_unit(quantity: str, unit: str) -> None:
-    try:
-        canonical(quantity, unit)
-    except KeyError:
-        names = [*INPUT_BY_NAME, *DERIVED_BY_CODE]
-        near = get_close_matches(quantity, names, 3) or names
-        raise ValueError(f"no quantity {quantity!r}; write one of {', '.join(near)}") from None
-    except SkipError as error:
-        raise ValueError(f"unit of {quantity}: {error.detail}; write its UCUM code") from None

@@ -24,7 +24,7 @@ def turn(
     probability: float,
     axes: tuple[AxisState, ...],
 ) -> Turn:
-    """The turn that an episode of ``rule`` takes at the anchor ``place``, where the links of the chain are ``axes``."""
+    """The turn that an episode of ``rule`` takes at the anchor ``place``, where the links are ``axes``."""
     condition = rule.clears if kind is TurnKind.CLEARED else rule.raises
     return Turn(
         kind,

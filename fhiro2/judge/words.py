@@ -5,8 +5,9 @@ from __future__ import annotations
 from collections.abc import Iterator
 
 from fhiro2.catalogue import title_of
+from fhiro2.judge.clause import Clause
 from fhiro2.judge.condition import Operator
-from fhiro2.judge.rulefile import Clause, Rule, Scope
+from fhiro2.judge.rulefile import Rule, Scope
 
 _OPERATORS = {
     Operator.BELOW: "below",
@@ -79,16 +80,23 @@ def _course(rule: Rule) -> Iterator[str]:
 
 def _clause(clause: Clause) -> Iterator[str]:
     """One line a comparison, groups indented under their word."""
-    for word, parts in (
-        ("any of these holds:", clause.any_of),
-        ("all of these hold:", clause.all_of),
-        ("this does not hold:", (clause.negated,) if clause.negated else None),
-    ):
-        if parts is not None:
-            yield word
-            for part in parts:
-                yield from (f"  {line}" for line in _clause(part))
-    if clause.quantity is not None:
-        how = next(one for one in Operator if getattr(clause, one) is not None)
-        unit = "" if clause.unit == "1" else f" {clause.unit}".replace("mm[Hg]", "mmHg")
-        yield f"{title_of(clause.quantity)} {_OPERATORS[how]} {getattr(clause, how):g}{unit}"
+    if clause.any_of is not None:
+        yield "any of these holds:"
+    elif clause.all_of is not None:
+        yield "all of these hold:"
+    elif clause.some_of is not None:
+        yield f"at least {clause.some_of.least} of these {len(clause.parts)} hold:"
+    elif clause.negated is not None:
+        yield "this does not hold:"
+    elif clause.unknown is not None:
+        yield f"{title_of(clause.unknown)} not known"
+    elif clause.quantity is not None:
+        yield _comparison(clause, clause.quantity)
+    for part in clause.parts:
+        yield from (f"  {line}" for line in _clause(part))
+
+
+def _comparison(clause: Clause, quantity: str) -> str:
+    unit = "" if clause.unit == "1" else f" {clause.unit}".replace("mm[Hg]", "mmHg")
+    least = "" if clause.certainty is None else f", with a probability of at least {100 * clause.certainty:g} %"
+    return f"{title_of(quantity)} {_OPERATORS[clause.operator]} {getattr(clause, clause.operator):g}{unit}{least}"

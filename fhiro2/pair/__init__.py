@@ -93,7 +93,7 @@ class _Pairing:
         lead = table.columns[_SAMPLE_INPUTS[kind][0]]
         lead.runner_up[:-1][repeated[1:]] = table.reading[1:][repeated[1:]]
         _mark_discordant(table, self.same_sample)
-        table = _kept(table, ~repeated)
+        table = table.at(~repeated)
         self._earlier_haemoglobin(table)
         if kind == ARTERIAL:
             self._around(table)
@@ -294,17 +294,9 @@ def _mark_discordant(table: AnchorTable, same_sample: int) -> None:
         )
 
 
-def _kept(table: AnchorTable, keep: Truths) -> AnchorTable:
-    columns = {name: pick(column, keep) for name, column in table.columns.items()}
-    facts = {name: state[keep] for name, state in table.facts.items()}
-    return AnchorTable(
-        table.kind, table.reading[keep], table.patient[keep], table.effective[keep], table.known[keep], columns, facts
-    )
-
-
 def _cut(table: AnchorTable, timelines: Timelines) -> AnchorTable:
     inside = (table.effective >= timelines.start) & (table.effective < timelines.stop)
-    return table if inside.all() else _kept(table, inside)
+    return table if inside.all() else table.at(inside)
 
 
 def _state_facts(table: AnchorTable, timelines: Timelines) -> None:
