@@ -233,6 +233,7 @@ DERIVED: tuple[Derived, ...] = (
         2,
         "extraction-excess/1",
         "Fick A, 1870; expected at a consumption index of 130 mL/min/m2 and a cardiac index of 3 L/min/m2 (common practice)",
+        signed=True,
     ),
     Derived(
         "oxygen-extraction-ratio-central",
@@ -286,8 +287,17 @@ DERIVED: tuple[Derived, ...] = (
         1,
         "saturation-gap/1",
         _CURVE,
+        signed=True,
     ),
-    Derived("saturation-gap-pulse", "SpO2 minus predicted arterial saturation", "%", 1, "saturation-gap/1", _CURVE),
+    Derived(
+        "saturation-gap-pulse",
+        "SpO2 minus predicted arterial saturation",
+        "%",
+        1,
+        "saturation-gap/1",
+        _CURVE,
+        signed=True,
+    ),
     Derived(
         "cardiac-index",
         "Cardiac index",

@@ -168,6 +168,7 @@ def test_only_signed_values_are_ever_negative() -> None:
     signed = {row.code for row in DERIVED if row.signed}
     assert signed == {
         "oxygen-content-difference", "oxygen-content-difference-central", "alveolar-oxygen-pressure", GRADIENT,
+        "oxygen-extraction-excess", "saturation-gap-measured", "saturation-gap-pulse",
     }  # fmt: skip
     seen = 0
     for timelines in ward_timelines():

@@ -378,7 +378,7 @@ def command(*words: str, cwd: Path | None = None) -> subprocess.CompletedProcess
 def test_the_demo_says_what_a_clinician_can_read() -> None:
     found = command("demo", "--once")
     assert found.returncode == 0, found.stderr
-    for words in ("received", "quarantined", "Arterial oxygen content", "Low arterial oxygen", "Caution: ", "w9-p02"):
+    for words in ("received", "quarantined", "Arterial oxygen content", "Low arterial oxygen", "Cautions:", "w9-p02"):
         assert words in found.stdout
     assert "Traceback" not in found.stderr
 

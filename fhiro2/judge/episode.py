@@ -52,7 +52,8 @@ def sustained(
         for number, key in enumerate(keys)
         if (standing := carried.get(key, _NOTHING)).run is not None
     }
-    result, runs = lasting(rule.lasting, table, found, known, before)
+    cleared = evaluate(rule.clears, table.columns).truth == TRUE
+    result, runs = lasting(rule.lasting, table, found, known | cleared, before)
     after = dict(carried)
     for number, run in runs.items():
         _keep(after, keys[number], replace(after.get(keys[number], _NOTHING), run=run), rule)

@@ -59,8 +59,8 @@ def lasting(
 ) -> tuple[Floats, Runs]:
     """``probability`` where the run of positive findings has lasted long enough, else NaN; and the runs at the end.
 
-    A run ends at a ``known`` finding that is not positive, and where two positive findings lie too far apart; what is
-    unknown neither ends nor prolongs it. ``carried`` are the runs before the first anchor.
+    A run ends where what is ``known`` is not positive, and where two positive findings lie too far apart; all other
+    anchors neither end nor prolong it. ``carried`` are the runs before the first anchor.
     """
     places = np.flatnonzero(known)
     there, owner, time = ~np.isnan(probability[places]), table.patient[places], table.effective[places]
