@@ -14,7 +14,7 @@ from typing import get_args
 import numpy as np
 
 from fhiro2.judge import chain_of, judge, read_pack
-from fhiro2.judge.finding import finding
+from fhiro2.judge.finding import finding, positive
 from fhiro2.model import DAY, MINUTE, READING, AnchorTable, Column, Floats, Names, Origins, Patient, Timelines, Why
 from fhiro2.packaged import rules_folder
 from fhiro2.settings import ContextFact
@@ -79,8 +79,8 @@ def main(size: int) -> None:
         "chaining to flags": lambda: chain.raising(found),
         "judging, all of it": lambda: judge(pack, timelines, {"arterial": table}, {}),
     }
-    positive = np.mean([~np.isnan(values) for values in found.values()])
-    sys.stdout.write(f"{size} anchors, {len(pack.rules)} rules, {positive:.1%} of findings positive\n")
+    share = np.mean([~np.isnan(values) for values in found.values()])
+    sys.stdout.write(f"{size} anchors, {len(pack.rules)} rules, {share:.1%} of findings positive\n")
     sys.stdout.write(f"one comparison: {1e9 * one / size:.2f} ns an anchor; evaluators: {chain.evaluators}\n")
     for name, work in stages.items():
         sys.stdout.write(f"{name:24} {least_time(work) / one:8.0f} comparisons\n")
