@@ -7,6 +7,7 @@ import os
 import subprocess
 import sys
 from collections.abc import Mapping
+from dataclasses import replace
 from datetime import date
 from pathlib import Path
 from typing import Any
@@ -16,12 +17,15 @@ import pytest
 from hypothesis import given
 from hypothesis import strategies as st
 
+from fhiro2.assess import assess
 from fhiro2.cli import evaluators
 from fhiro2.errors import StopError
+from fhiro2.flags import Flag
 from fhiro2.judge import Pack, Standing, chain, check_pack, judge, read_pack
 from fhiro2.judge.chain import Chain, ForwardChainer, fnv1a
 from fhiro2.judge.rulefile import MOST_NEEDED
 from fhiro2.packaged import rules_folder
+from fhiro2.settings import Settings
 from tests.test_episode import LOW_HAEMOGLOBIN, LOW_OXYGEN, PACK, RULES, Point, adults, laid_out
 
 ALIKE = ("294a136d-0909-4f2f-81aa-1fcbb871879f", "08510b35-6da4-4a47-bf2e-6e6d2aa726e8")
@@ -112,6 +116,28 @@ def test_hiding_the_library_gives_the_same_flags_and_says_so(monkeypatch: pytest
     assert alone.flags(frozenset("abc")) == frozenset("abc")
     assert alone.flags(frozenset("ac")) == frozenset()
     assert "built-in one alone" in evaluators(alone.evaluators)
+
+
+@with_durable
+def test_the_ward_has_the_same_flags_without_the_library(monkeypatch: pytest.MonkeyPatch) -> None:
+    """But for the caution that says so; and both evaluators agree on the whole ward."""
+    pack = read_pack(rules_folder())
+
+    def found() -> list[Flag]:
+        chain._chain.cache_clear()
+        outcomes = [assess(timelines, Settings(), pack)[0] for timelines in ward_timelines()]
+        assert all(outcome.held == () for outcome in outcomes)
+        return [flag for outcome in outcomes for flag in outcome.flags]
+
+    both = found()
+    monkeypatch.setitem(sys.modules, "durable", None)
+    alone = found()
+    chain._chain.cache_clear()
+    assert both
+    assert all(chain.ALONE in flag.cautions for flag in alone)
+    assert both == [
+        replace(flag, cautions=tuple(one for one in flag.cautions if one != chain.ALONE)) for flag in alone
+    ]
 
 
 @with_durable
