@@ -27,6 +27,7 @@ from fhiro2.judge.rulefile import MOST_NEEDED
 from fhiro2.packaged import rules_folder
 from fhiro2.settings import Settings
 from tests.test_episode import LOW_HAEMOGLOBIN, LOW_OXYGEN, PACK, RULES, Point, adults, laid_out
+from tests.test_way import ward_timelines
 
 ALIKE = ("294a136d-0909-4f2f-81aa-1fcbb871879f", "08510b35-6da4-4a47-bf2e-6e6d2aa726e8")
 SMALL = {"a": frozenset("b"), "b": frozenset[str](), "c": frozenset("ab")}
