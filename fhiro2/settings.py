@@ -49,12 +49,36 @@ class Windows(_Frozen):
     height: float = Field(365 * 24 * 60.0, gt=0, description="age of a body height (adults)")
 
 
+class Server(_Frozen):
+    """A FHIR R4 server and how to speak with it. The token comes from a file or from FHIRO2_TOKEN, never from here."""
+
+    name: str = Field("server", pattern=r"^[a-z0-9-]{1,40}$", description="names the source in ids; never change it")
+    url: str = Field(description="base address, http only for loopback")
+    token_file: Path | None = Field(None, description="file that holds a static bearer token and nothing else")
+    ca_file: Path | None = Field(None, description="certificates of a private authority (PEM)")
+    page_size: int = Field(200, ge=1, le=1000, description="entries asked for in one page")
+    overlap_minutes: float = Field(5.0, ge=0, description="how far each cycle reads back before the last one")
+    since: str | None = Field(None, description="instant from which the first cycle reads; all without it")
+    timeout_seconds: float = Field(30.0, gt=0, description="longest wait for one answer")
+
+    @field_validator("token_file", "ca_file", mode="before")
+    @classmethod
+    def _path(cls, given: object) -> object:
+        return Path(given) if isinstance(given, str) else given
+
+
 class Settings(_Frozen):
     """The settings of one site. Times are minutes, pressures kPa."""
 
     station_pressure_kpa: float | None = Field(
         None, gt=40, lt=112, description="usual barometric pressure at the ward, not reduced to sea level"
     )
+    altitude_m: float | None = Field(
+        None, ge=-430, le=5500, description="altitude of the ward, where its usual pressure is not known"
+    )
+    server: Server | None = Field(None, description="the FHIR server of `fhiro2 run`")
+    store: Path = Field(Path("fhiro2.sqlite"), description="file in which `fhiro2 run` keeps what it knows")
+    write: bool = Field(False, description="write to the server; without it a cycle says what it would write")
     base_urls: tuple[str, ...] = Field((), description="server addresses whose absolute references are our own")
     zone: str | None = Field(None, description="IANA zone for times without offset; without it they are quarantined")
     assume_respiratory_quotient: bool = Field(True, description="use 0.8 where none is measured, and say so")
@@ -65,6 +89,21 @@ class Settings(_Frozen):
     @classmethod
     def _zone_exists(cls, zone: str | None) -> str | None:
         return _checked_zone(zone)
+
+    @field_validator("store", mode="before")
+    @classmethod
+    def _path(cls, given: object) -> object:
+        return Path(given) if isinstance(given, str) else given
+
+    @property
+    def usual_pressure_kpa(self) -> float | None:
+        """Barometric pressure to assume where none was measured: the stated one, else that of the altitude.
+
+        Source: ISO 2533:1975, standard atmosphere, 101.325 (1 - 2.25577e-5 h)^5.25588 kPa.
+        """
+        if self.station_pressure_kpa is not None or self.altitude_m is None:
+            return self.station_pressure_kpa
+        return float(101.325 * (1 - 2.25577e-5 * self.altitude_m) ** 5.25588)
 
 
 class SiteCode(_Frozen):

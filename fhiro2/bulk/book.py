@@ -2,11 +2,11 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterator
+from collections.abc import Callable, Iterator
 
 from fhiro2.account import Account
 from fhiro2.admit import Admission
-from fhiro2.bulk.quarantine import Quarantine
+from fhiro2.bulk.quarantine import Keeper
 from fhiro2.bulk.unit import units
 from fhiro2.errors import Bucket, Reason, SkipError
 from fhiro2.fhir.wire import content_hash
@@ -14,12 +14,16 @@ from fhiro2.model import Integers
 from fhiro2.read import Raw, Source
 from fhiro2.timeline import NEVER_UPDATED, Resolution, Versions, resolve
 
+Ends = Callable[[int, Bucket, Reason | None], None]
+"""Told of each version, by its line, where it ended."""
+
 
 class Book:
     """One row a received version; ``close`` resolves them and enters each into the account once."""
 
-    def __init__(self, source: Source, quarantine: Quarantine | None) -> None:
+    def __init__(self, source: Source, quarantine: Keeper | None, ends: Ends | None = None) -> None:
         self.source = source
+        self._ends = ends
         self.versions = Versions()
         self._quarantine = quarantine
         self._parts: dict[int, tuple[Reason, ...]] = {}
@@ -57,6 +61,9 @@ class Book:
                 detail = "this version came with two contents"
                 self._quarantine.keep(row, self.source, unit, "", Reason.VERSION, detail)
             self._quarantine.settle(lambda row: True)
+        if self._ends is not None:
+            for row, line in enumerate(self.versions.rows()["line"].tolist()):
+                self._ends(line, *resolution.standing(row))
         return resolution
 
     def _hashes(self, rows: list[int]) -> dict[int, bytes]:

@@ -19,8 +19,8 @@ from fhiro2.admit.envelope import is_own
 from fhiro2.admit.moment import moment
 from fhiro2.admit.rows import Interner, Rows
 from fhiro2.admit.value import Valuer
-from fhiro2.bulk.book import Book, standing_origins
-from fhiro2.bulk.quarantine import Quarantine
+from fhiro2.bulk.book import Book, Ends, standing_origins
+from fhiro2.bulk.quarantine import Keeper
 from fhiro2.bulk.unit import OBSERVATION, named_id, observations, refusal, resource, units
 from fhiro2.bulk.unit_switch import unit_switches
 from fhiro2.codes import CONSCIOUSNESS, LOINC, code_table
@@ -52,15 +52,17 @@ def take_in(
     sources: Sequence[Source],
     settings: Settings,
     mapping: Mapping,
-    quarantine: Quarantine | None = None,
+    quarantine: Keeper | None = None,
     watch: Watch | None = None,
+    ends: Ends | None = None,
 ) -> Intake:
     """Read all sources; raises StopError for a mapping that names what does not exist.
 
-    ``watch`` sees each Observation that could be read, with what became of it.
+    ``watch`` sees each Observation that could be read, with what became of it; ``ends`` is told of every version in
+    the end.
     """
     with few_collections():
-        return _take_in(sources, settings, mapping, quarantine, watch)
+        return _take_in(sources, settings, mapping, quarantine, watch, ends)
 
 
 @contextmanager
@@ -78,14 +80,15 @@ def _take_in(
     sources: Sequence[Source],
     settings: Settings,
     mapping: Mapping,
-    quarantine: Quarantine | None,
+    quarantine: Keeper | None,
     watch: Watch | None,
+    ends: Ends | None,
 ) -> Intake:
     zone = settings.zone or mapping.zone
     interpreter, coder = Interpreter(mapping, zone), Coder(_codes(mapping))
     found, stands, received = Intake(), list[Integers](), 0
     for source in sources:
-        first, second = Book(source, quarantine), Book(source, quarantine)
+        first, second = Book(source, quarantine, ends), Book(source, quarantine, ends)
         context = _context(first, interpreter, found)
         admitter = Admitter(
             source.name,

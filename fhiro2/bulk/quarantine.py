@@ -4,13 +4,69 @@ from __future__ import annotations
 
 import json
 from collections.abc import Callable
+from dataclasses import dataclass
 from pathlib import Path
-from typing import Any
+from typing import Any, Protocol
 
 from fhiro2.errors import Reason
 from fhiro2.read import Raw, Source
 
 _MOST_DETAIL = 200  # characters; what a feed wrote may be quoted in it
+
+
+class Keeper(Protocol):
+    """Where refused resources go until it is known which versions stand."""
+
+    def keep(
+        self,
+        row: int,
+        source: Source,
+        unit: Raw,
+        resource: str,
+        reason: Reason | None,
+        detail: str,
+        part: int | None = None,
+    ) -> None:
+        """Keep one refused resource (or its component ``part``)."""
+
+    def settle(self, standing: Callable[[int], bool]) -> None:
+        """Drop what was kept of versions that do not stand."""
+
+
+@dataclass(frozen=True)
+class Refusal:
+    """One refused resource at a line of its source, or its component ``part``."""
+
+    line: int
+    reason: str
+    detail: str
+    part: int | None
+
+
+class KeptInMemory:
+    """Keeps the refusals of standing versions as a list."""
+
+    def __init__(self) -> None:
+        self._waiting: list[tuple[int, Refusal]] = []
+        self.refusals: list[Refusal] = []
+
+    def keep(
+        self,
+        row: int,
+        source: Source,
+        unit: Raw,
+        resource: str,
+        reason: Reason | None,
+        detail: str,
+        part: int | None = None,
+    ) -> None:
+        """Keep one refusal until it is known whether its version stands."""
+        self._waiting.append((row, Refusal(unit.line, str(reason), detail[:_MOST_DETAIL], part)))
+
+    def settle(self, standing: Callable[[int], bool]) -> None:
+        """Move the refusals of standing versions to the list, and drop the others."""
+        self.refusals += [refusal for row, refusal in self._waiting if standing(row)]
+        self._waiting.clear()
 
 
 class Quarantine:

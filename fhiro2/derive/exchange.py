@@ -30,7 +30,7 @@ def add_exchange(arterial: AnchorTable, pulse: AnchorTable, timelines: Timelines
 def _barometer(table: AnchorTable, settings: Settings) -> Operand:
     """The measured barometric pressure, else the site's usual one (or sea level, where the caller allows none)."""
     measured = table.columns["pb"]
-    assumed = (settings.station_pressure_kpa or SEA_LEVEL_KPA) / KPA.value
+    assumed = (settings.usual_pressure_kpa or SEA_LEVEL_KPA) / KPA.value
     known = measured.known()
     usual = exact(np.where(known, measured.value, assumed), np.where(known, measured.uncertainty, _WEATHER))
     usual.column.cautions[:] = np.where(known, measured.cautions, np.uint64(Caution.PRESSURE_ASSUMED))

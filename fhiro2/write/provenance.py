@@ -8,9 +8,12 @@ from fhiro2.fhir import systems
 from fhiro2.fhir.resources import Shape, dumped, quoted, shape, text_slot, time_slot
 from fhiro2.model import Origins
 from fhiro2.write import Run
-from fhiro2.write.identity import SOFTWARE, SOFTWARE_ID, SOFTWARE_REFERENCE
+from fhiro2.write.identity import SOFTWARE, SOFTWARE_ID, SOFTWARE_REFERENCE, provenance_of
 
 _IDENTIFIER = {"system": systems.SOFTWARE_IDENTIFIER, "value": SOFTWARE}
+
+_ASSEMBLER = {"system": systems.PARTICIPANT_TYPE, "code": "assembler", "display": "Assembler"}
+_AGENT = {"type": {"coding": [_ASSEMBLER]}, "who": {"reference": SOFTWARE_REFERENCE, "identifier": _IDENTIFIER}}
 
 
 class References(dict[int, str]):
@@ -85,8 +88,6 @@ def provenance_shape(run: Run, kind: str, policy: str) -> Shape:
     """
     sources = {"role": "source", "what": {"reference": text_slot("source")}}
     created = {"system": systems.DATA_OPERATION, "code": "CREATE", "display": "create"}
-    assembler = {"system": systems.PARTICIPANT_TYPE, "code": "assembler", "display": "Assembler"}
-    who = {"reference": SOFTWARE_REFERENCE, "identifier": _IDENTIFIER}
     content = {
         "resourceType": "Provenance",
         "id": text_slot("id"),
@@ -95,7 +96,25 @@ def provenance_shape(run: Run, kind: str, policy: str) -> Shape:
         "recorded": run.recorded,
         "policy": [policy, f"urn:sha256:{run.pack_hash}"],
         "activity": {"coding": [created]},
-        "agent": [{"type": {"coding": [assembler]}, "who": who}],
+        "agent": [_AGENT],
         "entity": [sources],
     }
     return shape("Provenance", content, [text_slot("id"), text_slot("target"), time_slot(1), sources])
+
+
+def withdrawal(run: Run, target: str, content_hash: str) -> str:
+    """The Provenance, as one line, of taking ``target`` back as entered in error."""
+    nullified = {"system": systems.DATA_OPERATION, "code": "NULLIFY", "display": "nullify"}
+    return dumped(
+        "Provenance",
+        {
+            "resourceType": "Provenance",
+            "id": provenance_of(target.partition("/")[2], content_hash),
+            "target": [{"reference": target}],
+            "recorded": run.recorded,
+            "policy": [f"urn:sha256:{run.pack_hash}"],
+            "reason": [{"text": "stands no longer by what is known now"}],
+            "activity": {"coding": [nullified]},
+            "agent": [_AGENT],
+        },
+    )

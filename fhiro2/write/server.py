@@ -1,0 +1,91 @@
+"""Resources to a FHIR server: each by its own id, so that writing again makes no second one; others' edits stay."""
+
+from __future__ import annotations
+
+import json
+from dataclasses import dataclass
+from enum import StrEnum
+from typing import Any
+
+from fhiro2.errors import StopError
+from fhiro2.fhir.client import Answer, Client
+
+
+class Fate(StrEnum):
+    """What became of one write."""
+
+    DONE = "done"
+    LATER = "later"
+    DEAD = "dead"
+
+
+@dataclass(frozen=True)
+class Delivered:
+    """One write: what became of it, the server's ETag, and what is wrong ('' if nothing; never a value)."""
+
+    fate: Fate
+    etag: str = ""
+    problem: str = ""
+
+
+class ServerSink:
+    """Writes single resources by PUT. ``client`` is the one that may write."""
+
+    def __init__(self, client: Client) -> None:
+        self._client = client
+
+    def put(self, reference: str, content: bytes, etag: str, *, in_doubt: bool) -> Delivered:
+        """Make ``reference`` hold ``content``; ``etag`` is what the server last said of it ('' for a first write).
+
+        ``in_doubt``: an earlier try may have arrived, so that the server is asked first. What somebody else has
+        changed meanwhile is not overwritten. Raises RetryError where the server cannot be reached, StopError where it
+        does not let us write at all.
+        """
+        if in_doubt:
+            there = self._client.read(reference)
+            if there.status == 200 and holds(there.body, content):
+                return Delivered(Fate.DONE, there.etag)
+            if there.status == 200 and not etag:
+                etag = there.etag
+        answer = self._client.update(reference, content, etag or None)
+        return self._judged(reference, content, answer)
+
+    def _judged(self, reference: str, content: bytes, answer: Answer) -> Delivered:
+        if answer.status in (200, 201):
+            return Delivered(Fate.DONE, answer.etag)
+        if answer.status == 412:
+            there = self._client.read(reference)
+            if there.status == 200 and holds(there.body, content):
+                return Delivered(Fate.DONE, there.etag)
+            return Delivered(Fate.DEAD, problem="changed at the server by somebody else; look at it there")
+        if answer.status == 410:
+            return Delivered(Fate.DEAD, problem="deleted at the server by somebody else")
+        if answer.status == 409:
+            return Delivered(Fate.LATER, problem="conflict at the server")
+        if answer.status in (404, 405):
+            raise StopError(
+                f"{reference}: the server does not take a resource with an id of ours (status {answer.status}); "
+                "allow update-as-create for this client"
+            )
+        codes = ", ".join(sorted({issue.code for issue in answer.issues})) or "no reason given"
+        return Delivered(Fate.DEAD, problem=f"refused with status {answer.status} ({codes})")
+
+
+def holds(body: bytes, content: bytes) -> bool:
+    """Whether the resource in ``body`` has all of ``content``; a server may add to it, and write 7.40 as 7.4."""
+    try:
+        return _covers(json.loads(body), json.loads(content))
+    except ValueError:
+        return False
+
+
+def _covers(there: Any, ours: Any) -> bool:
+    if isinstance(ours, dict):
+        return isinstance(there, dict) and all(
+            name in there and _covers(there[name], value) for name, value in ours.items() if name != "meta"
+        )
+    if isinstance(ours, list):
+        return isinstance(there, list) and len(there) == len(ours) and all(map(_covers, there, ours))
+    return (type(there) is type(ours) and there == ours) or (
+        isinstance(ours, int | float) and isinstance(there, int | float) and there == ours
+    )
