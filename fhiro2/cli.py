@@ -8,6 +8,7 @@ import tempfile
 import time
 from collections.abc import Iterator
 from contextlib import contextmanager
+from dataclasses import asdict
 from datetime import UTC, datetime
 from pathlib import Path
 from typing import TYPE_CHECKING, Annotated, Any
@@ -29,8 +30,10 @@ app = typer.Typer(
 )
 rules_app = typer.Typer(no_args_is_help=True, help="Check the rules, and tell what they do.")
 quarantine_app = typer.Typer(no_args_is_help=True, help="Look at what could not be used.")
+written_app = typer.Typer(no_args_is_help=True, help="Look at what was written to the server.")
 app.add_typer(rules_app, name="rules")
 app.add_typer(quarantine_app, name="quarantine")
+app.add_typer(written_app, name="written")
 
 PASSES = 2  # sources are read twice: context first
 QUIET_SECONDS = 2  # what ends sooner shows no progress
@@ -50,7 +53,8 @@ SettingsFile = Annotated[Path | None, typer.Option("--settings", help="settings 
 MappingFile = Annotated[Path | None, typer.Option("--mapping", help="signed mapping of the site (YAML)")]
 RulesFolder = Annotated[Path | None, typer.Option("--rules", help="folder of rules; the shipped ones without it")]
 AsJson = Annotated[bool, typer.Option("--json", help="print JSON for machines")]
-InFolder = Annotated[Path, typer.Option("--in", help="folder that a replay wrote")]
+InFolder = Annotated[Path | None, typer.Option("--in", help="folder that a replay wrote")]
+InStore = Annotated[Path | None, typer.Option("--store", help="store of `fhiro2 run`")]
 
 
 @app.command()
@@ -116,33 +120,109 @@ def census(
 
 
 @app.command()
-def account(folder: InFolder, as_json: AsJson = False) -> None:
-    """Show the account of a replay."""
+def run(
+    settings: Annotated[Path, typer.Option("--settings", help="settings of the site (YAML), with its server")],
+    once: Annotated[bool, typer.Option("--once", help="one cycle, then end")] = False,
+    mapping: MappingFile = None,
+    rules: RulesFolder = None,
+    as_json: AsJson = False,
+) -> None:
+    """Work beside a FHIR server: read what is new, compute, and write what the settings allow."""
+    from fhiro2.live import run_once
+    from fhiro2.terminal import show_cycle
+
+    if not once:
+        raise StopError("run without --once would go on for ever, which this version does not do; add --once")
+    site = _settings(settings)
+    done = run_once(site, _mapping(mapping), _pack(rules))
+    if as_json:
+        _print_json(asdict(done))
+    else:
+        show_cycle(Console(), done, writing=site.write)
+    raise typer.Exit(1 if done.dead or done.held or done.notices else 0)
+
+
+@app.command()
+def account(folder: InFolder = None, store: InStore = None, as_json: AsJson = False) -> None:
+    """Show the account of a replay or of a store."""
     from fhiro2.terminal import show_account, show_derived
 
-    found = _load(folder / "account.json")
+    if _one_of(folder, store) is store and store is not None:
+        from fhiro2.live import account_of, store_at
+
+        with store_at(store) as opened:
+            found = account_of(opened)
+    else:
+        found = _load(Path(folder or "") / "account.json")
     if as_json:
         _print_json(found)
     else:
         show_account(Console(), found)
-        show_derived(Console(), found)
+        if folder is not None:
+            show_derived(Console(), found)
 
 
 @quarantine_app.command("list")
-def quarantine_list(folder: InFolder, as_json: AsJson = False) -> None:
-    """List the quarantined resources of a replay."""
+def quarantine_list(folder: InFolder = None, store: InStore = None, as_json: AsJson = False) -> None:
+    """List the quarantined resources of a replay or of a store."""
     from fhiro2.terminal import show_quarantine
 
-    path = folder / "quarantine.ndjson"
-    try:
-        lines = [json.loads(line) for line in path.read_text(encoding="utf-8").splitlines()]
-    except (OSError, ValueError):
-        raise StopError(f"{path}: cannot be read; name the folder that a replay wrote") from None
+    if _one_of(folder, store) is store and store is not None:
+        from fhiro2.live import store_at
+
+        with store_at(store) as opened, opened.transaction() as work:
+            lines = work.quarantined()
+    else:
+        lines = _quarantined(Path(folder or "") / "quarantine.ndjson")
     if as_json:
         _print_json([{key: value for key, value in line.items() if key != "raw"} for line in lines])
     else:
         show_quarantine(Console(), lines)
     raise typer.Exit(1 if lines else 0)
+
+
+@quarantine_app.command("show")
+def quarantine_show(
+    row: Annotated[int, typer.Argument(help="row of the list")],
+    store: Annotated[Path, typer.Option("--store", help="store of `fhiro2 run`")],
+) -> None:
+    """Print one quarantined resource as it came, for staff who may see it."""
+    from fhiro2.live import store_at
+
+    with store_at(store) as opened, opened.transaction() as work:
+        content = work.content(row)
+    if content is None:
+        raise StopError(f"{store}: no kept resource in row {row}; `fhiro2 quarantine list --store {store}` lists them")
+    typer.echo(content)
+
+
+@quarantine_app.command("retry")
+def quarantine_retry(store: Annotated[Path, typer.Option("--store", help="store of `fhiro2 run`")]) -> None:
+    """Let the next cycle try all quarantined resources again, for example after a new mapping."""
+    from fhiro2.live import store_at
+
+    with store_at(store) as opened, opened.transaction() as work:
+        number = work.try_again()
+    Console().print(f"{number} resources are tried again in the next cycle", highlight=False)
+
+
+@written_app.command("list")
+def written_list(
+    store: Annotated[Path, typer.Option("--store", help="store of `fhiro2 run`")], as_json: AsJson = False
+) -> None:
+    """List what the server is known to hold of ours, and what still waits to be written."""
+    from fhiro2.live import store_at
+    from fhiro2.terminal import show_written
+
+    with store_at(store) as opened, opened.transaction() as work:
+        written, waiting = work.written(), work.outbox()
+    if as_json:
+        rows = [(one.reference, one.state, one.etag, "") for one in written]
+        rows += [(one.reference, one.state, "", one.problem) for one in waiting]
+        _print_json([dict(zip(("reference", "state", "etag", "problem"), row, strict=True)) for row in rows])
+    else:
+        show_written(Console(), written, waiting)
+    raise typer.Exit(1 if any(one.problem for one in waiting) else 0)
 
 
 @rules_app.command("check")
@@ -287,6 +367,20 @@ def _pack(folder: Path | None) -> Pack:
     from fhiro2.packaged import rules_folder
 
     return read_pack(folder or rules_folder())
+
+
+def _one_of(folder: Path | None, store: Path | None) -> Path | None:
+    """The one that is given; raises StopError for none or both."""
+    if (folder is None) == (store is None):
+        raise StopError("name either the folder of a replay (--in) or a store (--store)")
+    return folder or store
+
+
+def _quarantined(path: Path) -> list[dict[str, Any]]:
+    try:
+        return [json.loads(line) for line in path.read_text(encoding="utf-8").splitlines()]
+    except (OSError, ValueError):
+        raise StopError(f"{path}: cannot be read; name the folder that a replay wrote") from None
 
 
 def _load(path: Path) -> dict[str, Any]:

@@ -17,6 +17,8 @@ from fhiro2.census import Census, Prospect, advice, notices
 from fhiro2.errors import Bucket
 from fhiro2.flags import Flag
 from fhiro2.model import WHY_TEXT, Why
+from fhiro2.store.entry import Entry
+from fhiro2.worker import Cycle
 from fhiro2.write.flag import sections
 
 STROKES = {"info": "|", "warning": "||", "critical": "|||"}
@@ -176,12 +178,40 @@ def _shares(counts: Counter[str]) -> str:
 
 
 def show_quarantine(console: Console, lines: Sequence[dict[str, Any]]) -> None:
-    """The quarantined resources, one a line."""
-    table = plain_table("reason", "resource", "file", "line", "what is wrong", numbers=(3,))
+    """The quarantined resources of a replay (by file and line) or of a store (by row), one a line."""
+    stored = any("row" in line for line in lines)
+    table = plain_table("reason", "resource", *(("row",) if stored else ("file", "line")), "what is wrong")
     for line in lines:
         part = f" component {line['component']}" if "component" in line else ""
-        cells = (line["reason"], line["resource"] + part, line["file"], str(line["line"]), line["detail"])
-        table.add_row(*map(Text, cells))
+        place = (str(line["row"]),) if stored else (line["file"], str(line["line"]))
+        table.add_row(*map(Text, (line["reason"], line["resource"] + part, *place, line["detail"])))
+    console.print(table)
+
+
+def show_cycle(console: Console, done: Cycle, *, writing: bool) -> None:
+    """What one cycle did, as sentences."""
+    lines = [
+        f"{done.received} entries read, {done.repeated} of them known, {done.foreign} not asked for.",
+        f"{done.patients} patients computed again; {done.to_write} resources differ from what the server has.",
+    ]
+    if writing:
+        lines.append(
+            f"{done.written} written (their Provenance among them), {done.withdrawn} withdrawn, {done.dead} refused, "
+            f"{done.waiting} still wait."
+        )
+    else:
+        lines.append(f"Nothing was written: the settings do not say `write: true`. {done.waiting} resources wait.")
+    lines += [f"{patient}: flags withheld, the two evaluators disagree." for patient in done.held]
+    lines += [f"Notice: {notice}." for notice in done.notices]
+    for line in lines:
+        console.print(line, highlight=False, markup=False)
+
+
+def show_written(console: Console, written: Sequence[Entry], waiting: Sequence[Entry]) -> None:
+    """The ledger and the outbox, one resource a line."""
+    table = plain_table("state", "resource", "patient", "what is wrong")
+    for one in (*written, *waiting):
+        table.add_row(*map(Text, (one.state, one.reference, one.patient, one.problem)))
     console.print(table)
 
 

@@ -260,6 +260,17 @@ class Transaction:
             for row in self._connection.execute(asked.order_by(VERSION.c.row))
         ]
 
+    def content(self, row: int) -> bytes | None:
+        """The raw JSON of one version; None where there is none, or none any more."""
+        found = self._connection.execute(select(VERSION.c.content).where(VERSION.c.row == row)).scalar()
+        return None if found is None else bytes(found)
+
+    def try_again(self) -> int:
+        """Let everything that is quarantined, whole or in a component, count as not ended; returns how many."""
+        refused = (VERSION.c.bucket == "quarantined") | (VERSION.c.refused_parts != "")
+        values = {"bucket": "", "reason": "", "detail": "", "refused_parts": ""}
+        return self._connection.execute(update(VERSION).where(refused).values(values)).rowcount
+
     def patients(self, source: str) -> set[str]:
         """All patients of whom anything was received."""
         asked = select(VERSION.c.patient).where(VERSION.c.source == source).distinct()
