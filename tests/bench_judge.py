@@ -24,7 +24,8 @@ START = 1_772_344_800_000_000  # 2026-03-01T06:00:00Z
 USUAL = {
     "pao2": (90.0, 50.0), "sao2": (0.97, 0.85), "hb": (12.0, 6.0), "oxygen-extraction-ratio": (0.28, 0.5),
     "lactate": (1.2, 5.0), "temp": (37.0, 37.0), "fcohb": (0.01, 0.2), "fmethb": (0.01, 0.08),
-    "alveolar-arterial-gradient": (20.0, -30.0),
+    "alveolar-arterial-gradient": (20.0, -30.0), "saturation-gap-measured": (0.5, -12.0), "pf-ratio": (400.0, 150.0),
+    "peep": (5.0, 10.0), "ci": (3.0, 1.7), "oxygen-extraction-excess": (-0.03, 0.25),
 }  # fmt: skip
 """Canonical values: usual, and in the anchors with something amiss."""
 

@@ -400,10 +400,13 @@ def test_cases_go_through_the_chain(tmp_path: Path) -> None:
         'hb: {value: 60, unit: g/L, uncertainty: 1}, oxygen-extraction-ratio: {value: 0.6, unit: "1", uncertainty: 0}'
     )
     low = "after_minutes: 0, age_years: 60, pao2: {value: 7, unit: kPa, uncertainty: 0.3}"
+    severe = low.replace("value: 7", "value: 5")
     high = 'sao2: {value: 97, unit: "%", uncertainty: 1}, after_minutes: 0, age_years: 60, pao2: {value: 12, unit: kPa'
     told = "PaO2 7.00 kPa, measured arterial saturation not known at 2000-01-01 00:00 UTC"
+    worse = told.replace("7.00", "5.00")
     cases = f"""cases:
   - {{name: both, given: [{{{low}, {needed}}}], expect: flag, message: "{told}"}}
+  - {{name: both and severe, given: [{{{severe}, {needed}}}], expect: worsened, message: "{worse}"}}
   - {{name: need not known, given: [{{{low}}}], expect: unknown}}
   - {{name: need not met, given: [{{{low}, {needed.replace("value: 60", "value: 120")}}}], expect: none}}
   - {{name: need alone, given: [{{{high}, uncertainty: 0.3}}, {needed}}}], expect: none}}

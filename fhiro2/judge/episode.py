@@ -7,11 +7,10 @@ from dataclasses import dataclass, replace
 import numpy as np
 
 from fhiro2.flags import Flag, Turn, TurnKind
-from fhiro2.judge.axis import axis_states
 from fhiro2.judge.condition import TRUE, evaluate
 from fhiro2.judge.finding import Run, lasting, outside, positive
 from fhiro2.judge.rulefile import Rule
-from fhiro2.judge.turn import doubts, turn
+from fhiro2.judge.turn import Turns
 from fhiro2.model import MINUTE, AnchorTable, Floats, Integers, Timelines, Truths
 
 Key = tuple[str, str]
@@ -76,16 +75,16 @@ def fold(
     """
     states = _states(rule, timelines, table, probability)
     places = _turns(table.patient, states)
-    axes = axis_states(table, places)
+    turns = Turns(rule, timelines, table, places)
     changed: dict[tuple[str, str], Flag] = {}
     after = dict(carried)
-    for place, links in zip(places.tolist(), axes, strict=True):
+    for number, place in enumerate(places.tolist()):
         key = (timelines.patients[int(table.patient[place])].key, rule.id)
         before = after.get(key, _NOTHING)
         flag = before.flag
         for kind in _kinds(rule, before, int(states[place]), int(table.effective[place])):
-            one = turn(kind, rule, timelines, table, place, float(probability[place]), links)
-            cautions = {*rule.cautions, *doubts(rule, table, place), *remarks}
+            one = turns.at(number, kind, float(probability[place]))
+            cautions = {*rule.cautions, *turns.doubts(number), *remarks}
             flag = _turned(rule, flag, one, cautions, key[0])
         if flag is not None and flag is not before.flag:
             changed[key[0], flag.anchor.anchor_id] = flag
