@@ -14,7 +14,8 @@ from pathlib import Path
 from typing import Any
 
 from fhiro2.errors import Bucket, StopError
-from fhiro2.fhir.client import Client, Limits
+from fhiro2.fhir.client import Client
+from fhiro2.fhir.exchange import Limits
 from fhiro2.judge import Pack
 from fhiro2.read.server import ServerSource
 from fhiro2.settings import Mapping, Server, Settings

@@ -7,7 +7,8 @@ from dataclasses import dataclass, field
 from datetime import UTC, datetime, timedelta
 from typing import Any
 
-from fhiro2.errors import SkipError
+from fhiro2.errors import RetryError, SkipError
+from fhiro2.fhir.answers import Page
 from fhiro2.fhir.client import Client
 from fhiro2.fhir.wire import Door
 from fhiro2.read.label import Label, label
@@ -54,15 +55,16 @@ class ServerSource:
     def changed(self, kind: str, since: str, poll: Poll, codes: Sequence[str] = ()) -> Iterator[list[Found]]:
         """Page after page of what changed since ``since`` ('' for all), read a little further back, oldest first.
 
-        Each entry is looked at again: what is of another kind or has none of ``codes`` is counted and dropped.
+        Each entry is looked at again: what is of another kind or has none of ``codes`` is counted and dropped. Raises
+        RetryError where the server says that something is missing in its answer.
         """
         asked = {"_sort": "_lastUpdated", "_count": str(self._page_size)}
         if since:
             asked["_lastUpdated"] = f"ge{self._from(since)}"
         for start in range(0, max(len(codes), 1), CODES_AT_ONCE):
             some = codes[start : start + CODES_AT_ONCE]
-            for page in self._client.search(kind, {**asked, **({"code": ",".join(some)} if some else {})}):
-                found = list(self._read(page.entries, kind, poll, frozenset(some)))
+            for page in self._pages(kind, {**asked, **({"code": ",".join(some)} if some else {})}):
+                found = list(self._read(page, kind, poll, frozenset(some)))
                 for one in found:
                     poll.note(one.label.updated)
                 yield found
@@ -77,13 +79,21 @@ class ServerSource:
             for start in range(0, len(identities), IDS_AT_ONCE):
                 some = identities[start : start + IDS_AT_ONCE]
                 asked = {"_id": ",".join(some), "_count": str(len(some))}
-                for page in self._client.search(kind, asked):
-                    for one in self._read(page.entries, kind, Poll(), frozenset()):
+                for page in self._pages(kind, asked):
+                    for one in self._read(page, kind, Poll(), frozenset()):
                         if one.label.key.partition("/")[2] in some:
                             yield one
 
-    def _read(self, entries: Sequence[bytes], kind: str, poll: Poll, codes: frozenset[str]) -> Iterator[Found]:
-        for content in entries:
+    def _pages(self, kind: str, asked: dict[str, str]) -> Iterator[Page]:
+        for page in self._client.search(kind, list(asked.items())):
+            errors = [str(issue) for issue in page.outcomes if issue.severity in ("fatal", "error")]
+            if errors:
+                raise RetryError(f"GET {kind}: the server says that its answer is not whole ({', '.join(errors)})")
+            yield page
+
+    def _read(self, page: Page, kind: str, poll: Poll, codes: frozenset[str]) -> Iterator[Found]:
+        for entry in page.entries:
+            content = entry.resource
             try:
                 resource = self.door.resource(content)
             except SkipError:

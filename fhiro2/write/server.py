@@ -8,7 +8,8 @@ from enum import StrEnum
 from typing import Any
 
 from fhiro2.errors import StopError
-from fhiro2.fhir.client import Answer, Client
+from fhiro2.fhir.answers import Answer
+from fhiro2.fhir.client import Client
 
 
 class Fate(StrEnum):
@@ -44,19 +45,19 @@ class ServerSink:
         if in_doubt:
             there = self._client.read(reference)
             if there.status == 200 and holds(there.body, content):
-                return Delivered(Fate.DONE, there.etag)
+                return Delivered(Fate.DONE, there.etag or "")
             if there.status == 200 and not etag:
-                etag = there.etag
+                etag = there.etag or ""
         answer = self._client.update(reference, content, etag or None)
         return self._judged(reference, content, answer)
 
     def _judged(self, reference: str, content: bytes, answer: Answer) -> Delivered:
         if answer.status in (200, 201):
-            return Delivered(Fate.DONE, answer.etag)
+            return Delivered(Fate.DONE, answer.etag or "")
         if answer.status == 412:
             there = self._client.read(reference)
             if there.status == 200 and holds(there.body, content):
-                return Delivered(Fate.DONE, there.etag)
+                return Delivered(Fate.DONE, there.etag or "")
             return Delivered(Fate.DEAD, problem="changed at the server by somebody else; look at it there")
         if answer.status == 410:
             return Delivered(Fate.DEAD, problem="deleted at the server by somebody else")
