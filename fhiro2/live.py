@@ -47,7 +47,7 @@ def run_once(settings: Settings, mapping: Mapping, pack: Pack) -> Cycle:
         server.url,
         lambda: token(server),
         ca_file=server.ca_file,
-        limits=Limits(read_seconds=server.timeout_seconds),
+        limits=Limits(silence=server.timeout_seconds),
     )
     source = ServerSource(
         client, (server.url, *settings.base_urls), server.page_size, timedelta(minutes=server.overlap_minutes)
@@ -74,7 +74,9 @@ def token(server: Server) -> str | None:
             raise StopError(f"{server.token_file}: others may read the token; set its mode to 600")
         return server.token_file.read_text(encoding="utf-8").strip() or None
     except OSError as error:
-        raise StopError(f"{server.token_file}: cannot be read ({error.strerror}); name the file of the token") from None
+        raise StopError(
+            f"{server.token_file}: cannot be read ({error.strerror}); name the file of the token"
+        ) from None
 
 
 def account_of(store: Store) -> dict[str, Any]:

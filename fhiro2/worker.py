@@ -29,7 +29,7 @@ from fhiro2.read.server import Found, Poll, ServerSource
 from fhiro2.settings import Mapping, Settings
 from fhiro2.store import Ended, Received, Store, Transaction
 from fhiro2.store.difference import by_reference, difference
-from fhiro2.store.entry import DEAD, IN_FLIGHT, NEW, Entry
+from fhiro2.store.entry import DEAD, Entry
 from fhiro2.timeline import batches
 from fhiro2.write import Run
 from fhiro2.write.flag import flags
@@ -245,15 +245,16 @@ class Worker:
             with self._store.transaction() as work:
                 waiting = [one for one in work.outbox() if one.state != DEAD and one.reference not in failed]
                 due = _due(waiting)[:WRITES_AT_ONCE]
-                etags = {one.reference: one.etag for one in work.written([one.reference for one in due])}
-                work.mark([one.reference for one in due], IN_FLIGHT)
+                references = [one.reference for one in due]
+                etags = {one.reference: one.etag for one in work.written(references)}
+                doubts = work.doubts(references)
+                work.send(due)
             if not due:
                 return
             for one in due:
+                etag, doubtful = etags.get(one.reference, ""), doubts.get(one.reference, ())
                 try:
-                    sent = sink.put(
-                        one.reference, one.content, etags.get(one.reference, ""), in_doubt=one.state == IN_FLIGHT
-                    )
+                    sent = sink.put(one.reference, one.content, etag, doubtful)
                 except RetryError as error:
                     done.notices.append(f"writing stopped: {error}")
                     return
@@ -264,7 +265,7 @@ class Worker:
                         done.withdrawn += one.withdrawal
                     else:
                         failed.add(one.reference)
-                        work.mark([one.reference], DEAD if sent.fate is Fate.DEAD else NEW, sent.problem)
+                        work.fail(one.reference, sent.problem, dead=sent.fate is Fate.DEAD)
 
 
 def _due(waiting: Sequence[Entry]) -> list[Entry]:

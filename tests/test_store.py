@@ -200,13 +200,15 @@ def test_the_outbox_keeps_doubt_and_order(store: Store) -> None:
     with store.transaction() as work:
         work.post([entry("Observation/1"), entry("Provenance/1", after="Observation/1"), entry("Observation/2")])
         assert [one.reference for one in work.outbox()] == ["Observation/1", "Provenance/1", "Observation/2"]
-        work.mark(["Observation/1"], IN_FLIGHT)
+        work.send(work.outbox()[:1])
         work.post([entry("Observation/1", b"new"), entry("Observation/2", b"new")])
         work.unpost(["Observation/1", "Observation/2"])
         assert [(one.reference, one.state, one.content) for one in work.outbox()] == [
             ("Observation/1", IN_FLIGHT, b"new"), ("Provenance/1", NEW, b"{}"),
         ]  # fmt: skip
+        assert work.doubts(["Observation/1", "Observation/2"]) == {"Observation/1": [b"{}"]}
         work.confirm(work.outbox()[0], 'W/"4"', 7)
+        assert work.doubts(["Observation/1"]) == {}
         assert [one.reference for one in work.outbox()] == ["Provenance/1"]
         (ledger,) = work.ledger(["Patient/a"]).values()
         assert (ledger.etag, ledger.state, ledger.content) == ('W/"4"', STANDING, b"new")

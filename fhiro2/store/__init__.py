@@ -16,9 +16,9 @@ from sqlalchemy import Connection, create_engine, delete, event, func, insert, s
 from sqlalchemy.dialects.sqlite import insert as upsert
 
 from fhiro2.errors import StopError
-from fhiro2.store.entry import IN_FLIGHT, NEW, STANDING, WITHDRAWN, Entry
+from fhiro2.store.entry import DEAD, IN_FLIGHT, NEW, STANDING, WITHDRAWN, Entry
 from fhiro2.store.migrations import migrate
-from fhiro2.store.tables import COUNTER, CURSOR, LEASE, OUTBOX, REFERENCE, VERSION, WRITTEN
+from fhiro2.store.tables import COUNTER, CURSOR, DOUBT, LEASE, OUTBOX, REFERENCE, VERSION, WRITTEN
 
 _MANY = 500  # values in one IN list
 
@@ -342,12 +342,27 @@ class Transaction:
             for row in self._connection.execute(asked)
         ]
 
-    def mark(self, references: Iterable[str], state: str, problem: str = "") -> None:
-        """Set the state of outbox entries."""
+    def send(self, entries: Sequence[Entry]) -> None:
+        """Note that these outbox entries are now sent: until they are confirmed the server may hold their content."""
+        for one in entries:
+            doubt = upsert(DOUBT).values(reference=one.reference, hash=one.hash, content=one.content)
+            self._connection.execute(doubt.on_conflict_do_nothing())
+        self._mark([one.reference for one in entries], state=IN_FLIGHT, attempts=OUTBOX.c.attempts + 1)
+
+    def doubts(self, references: Iterable[str]) -> dict[str, list[bytes]]:
+        """By reference, every content that was sent and is not confirmed."""
+        found: dict[str, list[bytes]] = {}
         for some in _chunks(references):
-            values: dict[str, Any] = {"state": state, "problem": problem}
-            if state == IN_FLIGHT:
-                values["attempts"] = OUTBOX.c.attempts + 1
+            for row in self._connection.execute(select(DOUBT).where(DOUBT.c.reference.in_(some))):
+                found.setdefault(row.reference, []).append(bytes(row.content))
+        return found
+
+    def fail(self, reference: str, problem: str, *, dead: bool) -> None:
+        """Note why an outbox entry was not taken; what is ``dead`` is not tried again until it changes."""
+        self._mark([reference], state=DEAD if dead else IN_FLIGHT, problem=problem)
+
+    def _mark(self, references: Iterable[str], **values: Any) -> None:
+        for some in _chunks(references):
             self._connection.execute(update(OUTBOX).where(OUTBOX.c.reference.in_(some)).values(values))
 
     def confirm(self, entry: Entry, etag: str, at: int) -> None:
@@ -363,7 +378,8 @@ class Transaction:
         }
         row = upsert(WRITTEN).values(values)
         self._connection.execute(row.on_conflict_do_update(index_elements=["reference"], set_=values))
-        self._connection.execute(delete(OUTBOX).where(OUTBOX.c.reference == entry.reference))
+        for table in (OUTBOX, DOUBT):
+            self._connection.execute(delete(table).where(table.c.reference == entry.reference))
 
 
 def _in_doubt_or_new() -> Any:

@@ -92,3 +92,12 @@ OUTBOX = Table(
 
 ``after`` is the reference that must be written first ('' for none): Provenance follows its target.
 """
+
+DOUBT = Table(
+    "doubt",
+    METADATA,
+    Column("reference", Text, primary_key=True),
+    Column("hash", Text, primary_key=True),
+    Column("content", LargeBinary, nullable=False),
+)
+"""Every content that was sent and not answered yet: what the server then holds may be one of these, and still ours."""

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import json
+from collections.abc import Sequence
 from dataclasses import dataclass
 from enum import StrEnum
 from typing import Any
@@ -35,21 +36,20 @@ class ServerSink:
     def __init__(self, client: Client) -> None:
         self._client = client
 
-    def put(self, reference: str, content: bytes, etag: str, *, in_doubt: bool) -> Delivered:
+    def put(self, reference: str, content: bytes, etag: str, doubtful: Sequence[bytes]) -> Delivered:
         """Make ``reference`` hold ``content``; ``etag`` is what the server last said of it ('' for a first write).
 
-        ``in_doubt``: an earlier try may have arrived, so that the server is asked first. What somebody else has
-        changed meanwhile is not overwritten. Raises RetryError where the server cannot be reached, StopError where it
-        does not let us write at all.
+        ``doubtful`` are contents that were sent before without an answer: the server is asked first, and one of them
+        is still ours. What somebody else has changed meanwhile is not overwritten. Raises RetryError where the server
+        cannot be reached, StopError where it does not let us write at all.
         """
-        if in_doubt:
+        if doubtful:
             there = self._client.read(reference)
             if there.status == 200 and holds(there.body, content):
                 return Delivered(Fate.DONE, there.etag or "")
-            if there.status == 200 and not etag:
+            if there.status == 200 and any(holds(there.body, one) for one in doubtful):
                 etag = there.etag or ""
-        answer = self._client.update(reference, content, etag or None)
-        return self._judged(reference, content, answer)
+        return self._judged(reference, content, self._client.update(reference, content, etag or None))
 
     def _judged(self, reference: str, content: bytes, answer: Answer) -> Delivered:
         if answer.status in (200, 201):
