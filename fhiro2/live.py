@@ -121,7 +121,7 @@ def _checked(settings: Settings) -> Server:
         raise StopError("the settings name no server; add `server: {url: ...}`")
     if settings.usual_pressure_kpa is None:
         raise StopError(
-            "the settings name neither station_pressure_kpa nor altitude_m; alveolar values need the site's own pressure"
+            "the settings name neither station_pressure_kpa nor altitude_m; add one: alveolar values need it"
         )
     return settings.server
 

@@ -2,9 +2,13 @@
 
 from __future__ import annotations
 
+from collections.abc import Iterable, Iterator
+
 from sqlalchemy import BigInteger, Column, Index, Integer, LargeBinary, MetaData, Table, Text
 
 _Number = BigInteger().with_variant(Integer, "sqlite")
+
+_MANY = 500  # values in one IN list
 
 METADATA = MetaData()
 
@@ -101,3 +105,10 @@ DOUBT = Table(
     Column("content", LargeBinary, nullable=False),
 )
 """Every content that was sent and not answered yet: what the server then holds may be one of these, and still ours."""
+
+
+def chunks(values: Iterable[str]) -> Iterator[list[str]]:
+    """The distinct values in order, as many at a time as one statement takes."""
+    everything = sorted(set(values))
+    for start in range(0, len(everything), _MANY):
+        yield everything[start : start + _MANY]
