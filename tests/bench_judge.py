@@ -14,7 +14,7 @@ from typing import get_args
 import numpy as np
 
 from fhiro2.judge import chain_of, judge, read_pack
-from fhiro2.judge.finding import finding
+from fhiro2.judge.finding import finding, positive
 from fhiro2.model import DAY, MINUTE, READING, AnchorTable, Column, Floats, Names, Origins, Patient, Timelines, Why
 from fhiro2.packaged import rules_folder
 from fhiro2.settings import ContextFact
@@ -24,7 +24,8 @@ START = 1_772_344_800_000_000  # 2026-03-01T06:00:00Z
 USUAL = {
     "pao2": (90.0, 50.0), "sao2": (0.97, 0.85), "hb": (12.0, 6.0), "oxygen-extraction-ratio": (0.28, 0.5),
     "lactate": (1.2, 5.0), "temp": (37.0, 37.0), "fcohb": (0.01, 0.2), "fmethb": (0.01, 0.08),
-    "alveolar-arterial-gradient": (20.0, -30.0),
+    "alveolar-arterial-gradient": (20.0, -30.0), "saturation-gap-measured": (0.5, -12.0), "pf-ratio": (400.0, 150.0),
+    "peep": (5.0, 10.0), "ci": (3.0, 1.7), "oxygen-extraction-excess": (-0.03, 0.25),
 }  # fmt: skip
 """Canonical values: usual, and in the anchors with something amiss."""
 
@@ -79,8 +80,8 @@ def main(size: int) -> None:
         "chaining to flags": lambda: chain.raising(found),
         "judging, all of it": lambda: judge(pack, timelines, {"arterial": table}, {}),
     }
-    positive = np.mean([~np.isnan(values) for values in found.values()])
-    sys.stdout.write(f"{size} anchors, {len(pack.rules)} rules, {positive:.1%} of findings positive\n")
+    share = np.mean([~np.isnan(values) for values in found.values()])
+    sys.stdout.write(f"{size} anchors, {len(pack.rules)} rules, {share:.1%} of findings positive\n")
     sys.stdout.write(f"one comparison: {1e9 * one / size:.2f} ns an anchor; evaluators: {chain.evaluators}\n")
     for name, work in stages.items():
         sys.stdout.write(f"{name:24} {least_time(work) / one:8.0f} comparisons\n")

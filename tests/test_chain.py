@@ -7,6 +7,7 @@ import os
 import subprocess
 import sys
 from collections.abc import Mapping
+from dataclasses import replace
 from datetime import date
 from pathlib import Path
 from typing import Any
@@ -16,13 +17,17 @@ import pytest
 from hypothesis import given
 from hypothesis import strategies as st
 
+from fhiro2.assess import assess
 from fhiro2.cli import evaluators
 from fhiro2.errors import StopError
+from fhiro2.flags import Flag
 from fhiro2.judge import Pack, Standing, chain, check_pack, judge, read_pack
 from fhiro2.judge.chain import Chain, ForwardChainer, fnv1a
 from fhiro2.judge.rulefile import MOST_NEEDED
 from fhiro2.packaged import rules_folder
+from fhiro2.settings import Settings
 from tests.test_episode import LOW_HAEMOGLOBIN, LOW_OXYGEN, PACK, RULES, Point, adults, laid_out
+from tests.test_way import ward_timelines
 
 ALIKE = ("294a136d-0909-4f2f-81aa-1fcbb871879f", "08510b35-6da4-4a47-bf2e-6e6d2aa726e8")
 SMALL = {"a": frozenset("b"), "b": frozenset[str](), "c": frozenset("ab")}
@@ -112,6 +117,28 @@ def test_hiding_the_library_gives_the_same_flags_and_says_so(monkeypatch: pytest
     assert alone.flags(frozenset("abc")) == frozenset("abc")
     assert alone.flags(frozenset("ac")) == frozenset()
     assert "built-in one alone" in evaluators(alone.evaluators)
+
+
+@with_durable
+def test_the_ward_has_the_same_flags_without_the_library(monkeypatch: pytest.MonkeyPatch) -> None:
+    """But for the caution that says so; and both evaluators agree on the whole ward."""
+    pack = read_pack(rules_folder())
+
+    def found() -> list[Flag]:
+        chain._chain.cache_clear()
+        outcomes = [assess(timelines, Settings(), pack)[0] for timelines in ward_timelines()]
+        assert all(outcome.held == () for outcome in outcomes)
+        return [flag for outcome in outcomes for flag in outcome.flags]
+
+    both = found()
+    monkeypatch.setitem(sys.modules, "durable", None)
+    alone = found()
+    chain._chain.cache_clear()
+    assert both
+    assert all(chain.ALONE in flag.cautions for flag in alone)
+    assert both == [
+        replace(flag, cautions=tuple(one for one in flag.cautions if one != chain.ALONE)) for flag in alone
+    ]
 
 
 @with_durable
@@ -373,10 +400,13 @@ def test_cases_go_through_the_chain(tmp_path: Path) -> None:
         'hb: {value: 60, unit: g/L, uncertainty: 1}, oxygen-extraction-ratio: {value: 0.6, unit: "1", uncertainty: 0}'
     )
     low = "after_minutes: 0, age_years: 60, pao2: {value: 7, unit: kPa, uncertainty: 0.3}"
+    severe = low.replace("value: 7", "value: 5")
     high = 'sao2: {value: 97, unit: "%", uncertainty: 1}, after_minutes: 0, age_years: 60, pao2: {value: 12, unit: kPa'
     told = "PaO2 7.00 kPa, measured arterial saturation not known at 2000-01-01 00:00 UTC"
+    worse = told.replace("7.00", "5.00")
     cases = f"""cases:
   - {{name: both, given: [{{{low}, {needed}}}], expect: flag, message: "{told}"}}
+  - {{name: both and severe, given: [{{{severe}, {needed}}}], expect: worsened, message: "{worse}"}}
   - {{name: need not known, given: [{{{low}}}], expect: unknown}}
   - {{name: need not met, given: [{{{low}, {needed.replace("value: 60", "value: 120")}}}], expect: none}}
   - {{name: need alone, given: [{{{high}, uncertainty: 0.3}}, {needed}}}], expect: none}}

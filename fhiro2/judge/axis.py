@@ -42,7 +42,7 @@ from fhiro2.judge.condition import (
     leaves,
     quantities,
 )
-from fhiro2.model import AnchorTable, Integers
+from fhiro2.model import AnchorTable, Integers, Truths
 
 MET, NOT_MET, NOT_ASSESSABLE = "met", "not met", "not assessable"
 _WORDS: Final = {TRUE: MET, FALSE: NOT_MET, UNKNOWN: NOT_ASSESSABLE}
@@ -135,18 +135,24 @@ def _quantities(axis: Axis) -> set[str]:
 
 
 def _states(axis: Axis, table: AnchorTable) -> list[AxisState]:
-    asides = [(evaluate(condition, table.columns).truth == TRUE, words) for condition, words in axis.aside]
-    parts = [(leaf, evaluate(leaf, table.columns).truth == TRUE) for leaf in leaves(axis.met)]
+    """The states at all anchors, with the words for why."""
+    columns = table.columns
+    holds = [(title_of(leaf.quantity), evaluate(leaf, columns).truth == TRUE) for leaf in leaves(axis.met)]
+    lacks = [(title_of(name), ~columns[name].known()) for name in quantities(axis.met)]
+    stated = [(fact.replace("-", " "), table.facts[fact] == TRUE) for fact in axis.unless]
+    asides = [(words, evaluate(condition, columns).truth == TRUE) for condition, words in axis.aside]
     found = []
     for place, truth in enumerate(axis_truths(axis, table).tolist()):
-        facts = [fact.replace("-", " ") for fact in axis.unless if table.facts[fact][place] == TRUE]
-        lacking = [title_of(name) for name in quantities(axis.met) if not table.columns[name].known()[place]]
-        words = [text for where, text in asides if where[place] and truth != TRUE]
+
+        def here(named: list[tuple[str, Truths]], place: int = place) -> list[str]:
+            return [name for name, where in named if where[place]]
+
         if truth == TRUE:
-            words = [title_of(leaf.quantity) for leaf, holds in parts if holds[place]]
-        elif facts:
+            words = [", ".join(here(holds))]
+        elif facts := here(stated):
             words = [f"stated: {', '.join(facts)}"]
-        elif truth == UNKNOWN and lacking:
-            words.append(f"not known: {', '.join(lacking)}")
+        else:
+            lacking = here(lacks) if truth == UNKNOWN else []
+            words = [*here(asides), *([f"not known: {', '.join(lacking)}"] if lacking else [])]
         found.append((axis.name, _WORDS[truth], "; ".join(words)))
     return found

@@ -9,6 +9,7 @@ import operator
 from collections.abc import Callable, Iterator, Mapping, Sequence
 from dataclasses import dataclass
 from enum import StrEnum
+from functools import cache
 from typing import Any, TypeAlias
 
 import numpy as np
@@ -139,6 +140,7 @@ def leaves(condition: Condition) -> Iterator[Comparison | NotKnown]:
                 yield from leaves(part)
 
 
+@cache
 def quantities(condition: Condition) -> tuple[str, ...]:
     """The columns that a condition names, each once, in its order."""
     return tuple(dict.fromkeys(leaf.quantity for leaf in leaves(condition)))
