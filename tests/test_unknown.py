@@ -42,7 +42,7 @@ from fhiro2.judge.condition import (
 )
 from fhiro2.judge.finding import finding
 from fhiro2.judge.rulefile import Case, Given, Moment
-from fhiro2.judge.turn import doubts
+from fhiro2.judge.turn import Turns
 from fhiro2.model import Column
 from fhiro2.packaged import rules_folder
 
@@ -171,8 +171,9 @@ def test_a_fact_that_leaves_patients_out_is_spoken_of_where_nobody_stated_it(rul
         silent, absent, there = (int(answers((rule,), fact, one)["finding"].truth[0]) for one in moments)
         assert (silent, there) == (absent, FALSE)
         seen.add(silent)
-        table = laid_out((rule,), case.model_copy(update={"given": (moments[0],)}))[1]
-        assert any(fact.replace("-", " ") in text for text in doubts(rule, table, 0) if "nobody stated" in text)
+        timelines, table = laid_out((rule,), case.model_copy(update={"given": (moments[0],)}))
+        doubts = Turns(rule, timelines, table, np.array([0])).doubts(0)
+        assert any(fact.replace("-", " ") in text for text in doubts if "nobody stated" in text)
     assert TRUE in seen
 
 

@@ -8,10 +8,9 @@ Every link is judged by itself and all that are met are told, never one winner. 
 - **carrier** by haemoglobin below 100 g/L (our choice, within the moderate anaemia of the World Health Organization,
   80 to 109 g/L, from memory), COHb above 10 % or MetHb above 5 % (convention, common practice). Pressure, pulse
   oximetry and haemoglobin are all normal in carbon monoxide poisoning: only all three measured can exclude it.
-- **flow** by a cardiac index below 2.2 L/min/m2 (convention, common practice) with more extraction than this oxygen
-  content explains, beyond 1.64 standard uncertainties. Without an index, flow and demand cannot be told apart; either
-  is named only where extraction is also above 0.30 (convention, common practice), since an ordinary one may exceed
-  the reference by a little.
+- **flow** by a cardiac index below 2.2 L/min/m2 with an extraction above 0.30 (conventions, common practice) that is
+  more than this oxygen content explains, beyond 1.64 standard uncertainties. Without an index, flow and demand cannot
+  be told apart.
 - **use** by an extraction below 0.20 from mixed venous blood, beyond 1.64 standard uncertainties, with a lactate of
   4 mmol/L or more (conventions, common practice) in a patient of 35 Cel or more. Sepsis, liver failure, shunts and
   wedge samples look the same.
@@ -64,9 +63,13 @@ def _known(*names: str) -> Condition:
     return AllOf(tuple(Not(NotKnown(name)) for name in names))
 
 
-_MUCH_EXTRACTION = comparison("oxygen-extraction-excess", Operator.ABOVE, 0.0, "1", _CERTAIN)
-_HIGH_EXTRACTION = AllOf((_MUCH_EXTRACTION, comparison("oxygen-extraction-ratio", Operator.ABOVE, 0.30, "1")))
-_LOW_FLOW = AllOf((comparison("ci", Operator.BELOW, 2.2, "L/min/m2"), _MUCH_EXTRACTION))
+_HIGH_EXTRACTION = AllOf(
+    (
+        comparison("oxygen-extraction-ratio", Operator.ABOVE, 0.30, "1"),
+        comparison("oxygen-extraction-excess", Operator.ABOVE, 0.0, "1", _CERTAIN),
+    )
+)
+_LOW_FLOW = AllOf((comparison("ci", Operator.BELOW, 2.2, "L/min/m2"), _HIGH_EXTRACTION))
 _WARM = comparison("temp", Operator.AT_LEAST, 35, "Cel")
 _LITTLE_USED = AllOf(
     (
