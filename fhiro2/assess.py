@@ -6,11 +6,13 @@ was carried passed on. The live worker, replay and rehearsal all call this one f
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Iterable, Sequence
 from dataclasses import dataclass, replace
 
 from fhiro2.derive import add_derived
+from fhiro2.flags import Flag
 from fhiro2.judge import Carried, Pack, judge
+from fhiro2.judge.history import key_of
 from fhiro2.model import Outcome, Timelines
 from fhiro2.pair import tables
 from fhiro2.settings import Settings
@@ -43,12 +45,12 @@ def reassess(
     """Assess again after a late value, a correction or a retraction, and give the checkpoints as they then are.
 
     Anchors may differ from ``first`` to ``last``. The outcomes go from the last of ``checkpoints`` (in order of time)
-    that is not after ``first``, up to the first one after ``last`` at which what is carried is as it was; what was
-    found outside of them stands.
+    that is not after ``first``, up to the first one after ``last`` at which what is carried is as it was; values found
+    outside of them stand, and ``standing`` tells which flags do.
     """
     before = [one for one in checkpoints if one.at <= first]
     begin = before[-1] if before else Checkpoint(timelines.start, {})
-    renewed, outcomes, carried = before or [begin], list[Outcome](), begin.carried
+    renewed, outcomes, carried = before, list[Outcome](), begin.carried
     later = [one for one in checkpoints if one.at > first]
     for number, end in enumerate([*later, Checkpoint(timelines.stop, {})]):
         outcome, carried = assess(replace(timelines, start=begin.at, stop=end.at), settings, pack, carried)
@@ -60,3 +62,19 @@ def reassess(
         begin = Checkpoint(end.at, carried)
         renewed.append(begin)
     return outcomes, renewed
+
+
+def standing(given: Iterable[Flag], outcomes: Sequence[Outcome], checkpoints: Sequence[Checkpoint]) -> list[Flag]:
+    """The flags that stand after ``reassess`` gave ``outcomes`` and ``checkpoints``; ``given`` stood before it.
+
+    What was raised outside of the outcomes stands as it was. What they took on from the anchors before goes on from
+    how it was then, and what they hand on to the anchors after them ends as it did, since it is handed on unchanged.
+    """
+    start, stop = outcomes[0].timelines.start, outcomes[-1].timelines.stop
+    handed = {one.at: [last.flag for last in one.carried.values() if last.flag is not None] for one in checkpoints}
+    before = {key_of(flag): flag for flag in given}
+    stands = {key: flag for key, flag in before.items() if not start <= flag.raised < stop}
+    stands |= {key_of(flag): flag for flag in handed.get(start, ())}
+    stands |= {key_of(flag): flag for outcome in outcomes for flag in outcome.flags}
+    stands |= {key_of(flag): before[key_of(flag)] for flag in handed.get(stop, ())}
+    return list(stands.values())

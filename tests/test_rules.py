@@ -16,7 +16,7 @@ from fhiro2.errors import StopError
 from fhiro2.flags import Flag, TurnKind
 from fhiro2.judge import Rule, check_pack, read_pack
 from fhiro2.judge.axis import AXES, NOT_MET
-from fhiro2.judge.cases import _laid_out, failure
+from fhiro2.judge.cases import failure, laid_out
 from fhiro2.judge.chain import chain_of
 from fhiro2.judge.condition import AllOf
 from fhiro2.judge.judging import judged
@@ -147,7 +147,7 @@ def states(rule: Rule, flags: list[Flag]) -> list[str]:
 def test_no_rule_of_flow_or_use_is_raised_where_its_link_is_not_met(rule: Rule) -> None:
     found = states(rule, [flag for flags in ward_flags().values() for flag in flags])
     for case in rule.cases:
-        flags, _, _ = judged((rule,), chain_of((rule,)), *_laid_out((rule,), case), {})
+        flags, _, _ = judged((rule,), chain_of((rule,)), *laid_out((rule,), case), {})
         found += states(rule, flags)
     assert NOT_MET not in found
     assert bool(found) == (rule.id != OF_LACTATE_ALONE)

@@ -8,8 +8,9 @@ Every link is judged by itself and all that are met are told, never one winner. 
 - **carrier** by haemoglobin below 100 g/L (our choice, within the moderate anaemia of the World Health Organization,
   80 to 109 g/L, from memory), COHb above 10 % or MetHb above 5 % (convention, common practice). Pressure, pulse
   oximetry and haemoglobin are all normal in carbon monoxide poisoning: only all three measured can exclude it.
-- **flow** by a cardiac index below 2.2 L/min/m2 (convention, common practice) with more extraction than this oxygen
-  content explains, beyond 1.64 standard uncertainties. Without an index, flow and demand cannot be told apart.
+- **flow** by a cardiac index below 2.2 L/min/m2 with an extraction above 0.30 (conventions, common practice) that is
+  more than this oxygen content explains, beyond 1.64 standard uncertainties. Without an index, flow and demand cannot
+  be told apart.
 - **use** by an extraction below 0.20 from mixed venous blood, beyond 1.64 standard uncertainties, with a lactate of
   4 mmol/L or more (conventions, common practice) in a patient of 35 Cel or more. Sepsis, liver failure, shunts and
   wedge samples look the same.
@@ -62,8 +63,13 @@ def _known(*names: str) -> Condition:
     return AllOf(tuple(Not(NotKnown(name)) for name in names))
 
 
-_MUCH_EXTRACTION = comparison("oxygen-extraction-excess", Operator.ABOVE, 0.0, "1", _CERTAIN)
-_LOW_FLOW = AllOf((comparison("ci", Operator.BELOW, 2.2, "L/min/m2"), _MUCH_EXTRACTION))
+_HIGH_EXTRACTION = AllOf(
+    (
+        comparison("oxygen-extraction-ratio", Operator.ABOVE, 0.30, "1"),
+        comparison("oxygen-extraction-excess", Operator.ABOVE, 0.0, "1", _CERTAIN),
+    )
+)
+_LOW_FLOW = AllOf((comparison("ci", Operator.BELOW, 2.2, "L/min/m2"), _HIGH_EXTRACTION))
 _WARM = comparison("temp", Operator.AT_LEAST, 35, "Cel")
 _LITTLE_USED = AllOf(
     (
@@ -93,10 +99,10 @@ AXES: Final = (
         ("ecmo", "intracardiac-shunt"),
         (
             (
-                AllOf((_MUCH_EXTRACTION, NotKnown("ci"))),
+                AllOf((_HIGH_EXTRACTION, NotKnown("ci"))),
                 "high extraction by flow or demand, which cannot be separated",
             ),
-            (AllOf((_MUCH_EXTRACTION, Not(_LOW_FLOW))), "high extraction at this flow: demand"),
+            (AllOf((_HIGH_EXTRACTION, Not(_LOW_FLOW))), "high extraction at this flow: demand"),
         ),
     ),
     Axis(
@@ -104,6 +110,7 @@ AXES: Final = (
         AllOf((_LITTLE_USED, _WARM)),
         AllOf((Not(_LITTLE_USED), _WARM, _known("oxygen-extraction-ratio", "lactate"))),
         ("ecmo", "intracardiac-shunt"),
+        ((Not(_WARM), "core temperature below 35 Cel"),),
     ),
 )
 
@@ -126,7 +133,8 @@ def axis_states(table: AnchorTable, places: Integers) -> list[tuple[AxisState, .
 
 
 def _quantities(axis: Axis) -> set[str]:
-    return {*quantities(axis.met), *quantities(axis.not_met)}
+    conditions = (axis.met, axis.not_met, *(condition for condition, _ in axis.aside))
+    return {name for condition in conditions for name in quantities(condition)}
 
 
 def _states(axis: Axis, table: AnchorTable) -> list[AxisState]:

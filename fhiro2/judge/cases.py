@@ -98,7 +98,7 @@ def _outcome(rules: Sequence[Rule], case: Case, chain: Chain) -> tuple[str, str,
     That is: in a word, the message of the flag that stands, and what was not known at the end.
     """
     rule = rules[0]
-    timelines, table = _laid_out(rules, case)
+    timelines, table = laid_out(rules, case)
     flags = [flag for flag in judged(rules, chain, timelines, table, {})[0] if flag.rule == rule.id]
     if flags:
         latest = flags[-1].latest
@@ -111,8 +111,8 @@ def _outcome(rules: Sequence[Rule], case: Case, chain: Chain) -> tuple[str, str,
     return "none", "", []
 
 
-def _laid_out(rules: Sequence[Rule], case: Case) -> tuple[Timelines, AnchorTable]:
-    """A patient with one anchor for each moment of the case."""
+def laid_out(rules: Sequence[Rule], case: Case) -> tuple[Timelines, AnchorTable]:
+    """A patient with one anchor for each moment of ``case``, and the columns that ``rules`` ask for."""
     effective = START + MINUTE * np.array([moment.after_minutes for moment in case.given], dtype=np.int64)
     rows = np.arange(len(effective))
     readings = np.zeros(len(rows), READING)
