@@ -94,7 +94,11 @@ class SkipError(Fhiro2Error):
 
 
 class RetryError(Fhiro2Error):
-    """The call failed in a way that may pass: repeat it later."""
+    """The call failed in a way that may pass: repeat it later, where known not before ``after`` seconds."""
+
+    def __init__(self, message: str, after: float | None = None) -> None:
+        super().__init__(message)
+        self.after = after
 
 
 class StopError(Fhiro2Error):

@@ -1,1 +1,1 @@
-"""The only door to FHIR: JSON in (``wire``), resources out (``resources``), names of our systems (``systems``)."""
+"""The only door to FHIR: JSON in (``wire``), resources out (``resources``), HTTP (``client``), names (``systems``)."""

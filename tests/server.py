@@ -1,0 +1,64 @@
+"""A real FHIR server for tests, of other authors: ``fhir_server.sh`` installs, starts and stops it.
+
+One server without authentication and one with a token, each for the whole session on a free port of this machine with
+an empty store. What cannot be installed or started fails the tests that need it, by name.
+"""
+
+from __future__ import annotations
+
+import os
+import socket
+import subprocess
+from collections.abc import Iterator
+from contextlib import contextmanager
+from pathlib import Path
+
+import pytest
+
+SCRIPT = Path(__file__).parent / "fhir_server.sh"
+SLOWEST = 300  # seconds, with its installation
+
+
+@pytest.fixture(scope="session")
+def open_server(tmp_path_factory: pytest.TempPathFactory) -> Iterator[str]:
+    """The base URL of a server that lets everybody in."""
+    with _running(tmp_path_factory.mktemp("open-server")) as base_url:
+        yield base_url
+
+
+@pytest.fixture(scope="session")
+def guarded_server(tmp_path_factory: pytest.TempPathFactory) -> Iterator[tuple[str, str]]:
+    """The base URL of a server, and the only token that it lets in."""
+    token = "let-this-one-in"
+    with _running(tmp_path_factory.mktemp("guarded-server"), FHIR_TOKEN=token) as base_url:
+        yield base_url, token
+
+
+@pytest.fixture(scope="session")
+def server_python() -> str:
+    """The Python of the server's environment, which has libraries that this project does not ask for."""
+    return str(Path(_call("install", os.environ).strip(), "bin", "python"))
+
+
+@contextmanager
+def _running(folder: Path, **options: str) -> Iterator[str]:
+    environment = {name: value for name, value in os.environ.items() if name not in ("PYTHONPATH", "FHIR_TOKEN")}
+    environment |= {"FHIR_DIR": str(folder), "FHIR_PORT": str(_free_port())} | options
+    try:
+        yield _call("start", environment).strip().removeprefix("base_url=")
+    finally:
+        _call("stop", environment)
+
+
+def _call(word: str, environment: os._Environ[str] | dict[str, str]) -> str:
+    done = subprocess.run([SCRIPT, word], env=environment, capture_output=True, text=True, timeout=SLOWEST)
+    if done.returncode:
+        pytest.fail(f"the FHIR test server (tests/fhir_server.sh {word}) failed:\n{done.stderr[-2000:]}")
+    return done.stdout
+
+
+def _free_port() -> int:
+    with socket.socket() as probe:
+        probe.bind(("127.0.0.1", 0))
+        port: int = probe.getsockname()[1]
+        return port
