@@ -55,7 +55,7 @@ def run_once(settings: Settings, mapping: Mapping, pack: Pack) -> Cycle:
     store = Store(settings.store)
     holder = f"{socket.gethostname()}:{os.getpid()}"
     try:
-        store.take_lease(holder, _now(), _now() + LEASE_SECONDS * 1_000_000)
+        store.take_lease(holder, _now(), _now() + LEASE_SECONDS * 1_000_000, may_be_alive)
         try:
             sink = ServerSink(client) if settings.write else None
             return Worker(source, sink, store, settings, mapping, pack, server.name, _now, _recorded).cycle()
@@ -63,6 +63,20 @@ def run_once(settings: Settings, mapping: Mapping, pack: Pack) -> Cycle:
             store.give_up_lease(holder)
     finally:
         store.close()
+
+
+def may_be_alive(holder: str) -> bool:
+    """Whether the worker ``host:process`` may still run: it does not if it was one of this machine that has ended."""
+    host, _, process = holder.rpartition(":")
+    if host != socket.gethostname() or not process.isdigit():
+        return True
+    try:
+        os.kill(int(process), 0)
+    except ProcessLookupError:
+        return False
+    except PermissionError:
+        return True
+    return True
 
 
 def token(server: Server) -> str | None:

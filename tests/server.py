@@ -22,7 +22,7 @@ SLOWEST = 300  # seconds, with its installation
 @pytest.fixture(scope="session")
 def open_server(tmp_path_factory: pytest.TempPathFactory) -> Iterator[str]:
     """The base URL of a server that lets everybody in."""
-    with _running(tmp_path_factory.mktemp("open-server")) as base_url:
+    with a_server(tmp_path_factory.mktemp("open-server")) as base_url:
         yield base_url
 
 
@@ -30,7 +30,7 @@ def open_server(tmp_path_factory: pytest.TempPathFactory) -> Iterator[str]:
 def guarded_server(tmp_path_factory: pytest.TempPathFactory) -> Iterator[tuple[str, str]]:
     """The base URL of a server, and the only token that it lets in."""
     token = "let-this-one-in"
-    with _running(tmp_path_factory.mktemp("guarded-server"), FHIR_TOKEN=token) as base_url:
+    with a_server(tmp_path_factory.mktemp("guarded-server"), FHIR_TOKEN=token) as base_url:
         yield base_url, token
 
 
@@ -41,7 +41,8 @@ def server_python() -> str:
 
 
 @contextmanager
-def _running(folder: Path, **options: str) -> Iterator[str]:
+def a_server(folder: Path, **options: str) -> Iterator[str]:
+    """The base URL of a server of its own, with an empty store in ``folder``, stopped in the end."""
     environment = {name: value for name, value in os.environ.items() if name not in ("PYTHONPATH", "FHIR_TOKEN")}
     environment |= {"FHIR_DIR": str(folder), "FHIR_PORT": str(_free_port())} | options
     try:

@@ -6,7 +6,7 @@ cursor) is committed in one transaction; the network is never inside one.
 
 from __future__ import annotations
 
-from collections.abc import Iterator
+from collections.abc import Callable, Iterator
 from contextlib import contextmanager
 from pathlib import Path
 from typing import Any
@@ -46,11 +46,16 @@ class Store:
         with self._engine.begin() as connection:
             yield Transaction(connection)
 
-    def take_lease(self, holder: str, now: int, until: int) -> None:
-        """Become the one worker until ``until``; asked again, go on. Raises StopError while another is."""
+    def take_lease(
+        self, holder: str, now: int, until: int, alive: Callable[[str], bool] = lambda holder: True
+    ) -> None:
+        """Become the one worker until ``until``; asked again, go on.
+
+        Raises StopError while another holder has it who may be ``alive``.
+        """
         with self._engine.begin() as connection:
             row = connection.execute(select(LEASE)).one_or_none()
-            if row is not None and row.holder != holder and row.until > now:
+            if row is not None and row.holder != holder and row.until > now and alive(row.holder):
                 seconds = (row.until - now) // 1_000_000 + 1
                 raise StopError(
                     f"{self.path}: worker {row.holder} has this store for {seconds} s more; end it or wait"
