@@ -41,6 +41,7 @@ from fhiro2.write.values import values
 PATIENTS_AT_ONCE = 50
 WRITES_AT_ONCE = 50
 OBSERVATIONS = "Observation"
+BASIS = "basis"
 _CONTEXT_KINDS = tuple(sorted(CONTEXT_TYPES))
 
 
@@ -191,10 +192,12 @@ class Worker:
     # --- compute ---
 
     def _compute(self, done: Cycle) -> None:
-        """Everything of the patients of whom something is new, a bounded number of patients at a time."""
+        """Everything of the patients of whom something is new, or of all, a bounded number of patients at a time."""
+        basis = self._basis()
         with self._store.transaction() as work:
-            pending = work.pending(self._name)
-            affected = work.patients_of(self._name, pending)
+            affected = work.patients_of(self._name, work.pending(self._name))
+            if work.cursor(self._name, BASIS) != basis:
+                affected = work.patients(self._name)
         while affected:
             with self._store.transaction() as work:
                 group: set[str] = set()
@@ -207,6 +210,14 @@ class Worker:
             rows = work.pending_contents(self._name)
         if rows:
             self._compute_for(set(), rows, done)
+        with self._store.transaction() as work:
+            work.set_cursor(self._name, BASIS, basis)
+
+    def _basis(self) -> str:
+        """What everything is computed by; where it changed, all patients are computed again."""
+        settings = self._settings.model_dump_json(exclude={"server", "store", "write"})
+        parts = (__version__, self._pack.hash, settings, self._mapping.model_dump_json())
+        return hashlib.sha256("\n".join(parts).encode()).hexdigest()
 
     def _compute_for(self, group: set[str], rows: Sequence[tuple[int, bytes]], done: Cycle) -> None:
         run = Run(self._recorded(), self._pack.hash, __version__)
@@ -217,15 +228,17 @@ class Worker:
 
         intake = take_in([Stored(self._name, rows)], self._settings, self._mapping, kept, ends=end)
         wanted: dict[str, tuple[Entry, Entry]] = {}
+        held: set[str] = set()
         for timelines in batches(intake.readings, intake.rows.names, intake.rows.origins, intake.roster):
             outcome, _ = assess(timelines, self._settings, self._pack)
-            done.held += outcome.held
+            held |= {patient.reference for patient in timelines.patients if patient.key in outcome.held}
             wanted |= self._rendered(outcome, run, group)
+        done.held += tuple(sorted(held & group))
         done.patients += len(group)
         with self._store.transaction() as work:
             work.end(_ended(ends, kept))
             if group:
-                done.to_write += _post(work, group, wanted, run)
+                done.to_write += _post(work, group, wanted, held, run)
 
     def _rendered(self, outcome: Any, run: Run, group: set[str]) -> dict[str, tuple[Entry, Entry]]:
         """What stands for the patients of ``group``: each resource with its Provenance, by reference."""
@@ -243,8 +256,7 @@ class Worker:
         failed: set[str] = set()
         while True:
             with self._store.transaction() as work:
-                waiting = [one for one in work.outbox() if one.state != DEAD and one.reference not in failed]
-                due = _due(waiting)[:WRITES_AT_ONCE]
+                due = work.due(WRITES_AT_ONCE, failed)
                 references = [one.reference for one in due]
                 etags = {one.reference: one.etag for one in work.written(references)}
                 doubts = work.doubts(references)
@@ -266,12 +278,6 @@ class Worker:
                     else:
                         failed.add(one.reference)
                         work.fail(one.reference, sent.problem, dead=sent.fate is Fate.DEAD)
-
-
-def _due(waiting: Sequence[Entry]) -> list[Entry]:
-    """What may be written now: nothing whose target still waits."""
-    unwritten = {one.reference for one in waiting}
-    return [one for one in waiting if one.after not in unwritten]
 
 
 def _ended(ends: dict[int, tuple[Bucket, Reason | None]], kept: KeptInMemory) -> list[Ended]:
@@ -334,12 +340,18 @@ def _provenance(line: str, patient: str, target: str) -> Entry:
     )
 
 
-def _post(work: Transaction, group: set[str], wanted: dict[str, tuple[Entry, Entry]], run: Run) -> int:
-    """Put into the outbox what differs from what the server has, and take out what need not be written any more."""
-    outbox = work.outbox(group)
-    found = difference(
-        wanted, by_reference(work.ledger(group).values()), by_reference(outbox), lambda one: _withdrawn(one, run)
-    )
+def _post(work: Transaction, group: set[str], wanted: dict[str, tuple[Entry, Entry]], held: set[str], run: Run) -> int:
+    """Put into the outbox what differs from what the server has, and take out what need not be written any more.
+
+    The flags of patients who are ``held`` stay as they are: nothing is known of what should stand.
+    """
+
+    def left_alone(one: Entry) -> bool:
+        return one.patient in held and one.reference.startswith("Flag/")
+
+    outbox = [one for one in work.outbox(group) if not left_alone(one)]
+    ledger = [one for one in work.ledger(group).values() if not left_alone(one)]
+    found = difference(wanted, by_reference(ledger), by_reference(outbox), lambda one: _withdrawn(one, run))
     again = found.drop | {one.reference for one, _ in found.post}
     work.unpost(found.drop | {one.reference for one in outbox if one.after in again})
     device = _device(run)
