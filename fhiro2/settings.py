@@ -78,6 +78,7 @@ class Settings(_Frozen):
     )
     server: Server | None = Field(None, description="the FHIR server of `fhiro2 run`")
     store: Path = Field(Path("fhiro2.sqlite"), description="file in which `fhiro2 run` keeps what it knows")
+    write_together: int = Field(1, ge=1, le=200, description="resources in one request (a batch); 1 for one by one")
     write: bool = Field(False, description="write to the server; without it a cycle says what it would write")
     base_urls: tuple[str, ...] = Field((), description="server addresses whose absolute references are our own")
     zone: str | None = Field(None, description="IANA zone for times without offset; without it they are quarantined")

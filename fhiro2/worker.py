@@ -35,11 +35,11 @@ from fhiro2.write import Run
 from fhiro2.write.flag import flags
 from fhiro2.write.identity import SOFTWARE_REFERENCE
 from fhiro2.write.provenance import software, withdrawal
-from fhiro2.write.server import Fate, ServerSink
+from fhiro2.write.server import Delivered, Fate, ServerSink
 from fhiro2.write.values import values
 
 PATIENTS_AT_ONCE = 50
-WRITES_AT_ONCE = 50
+WRITES_AT_ONCE = 200
 OBSERVATIONS = "Observation"
 BASIS = "basis"
 _CONTEXT_KINDS = tuple(sorted(CONTEXT_TYPES))
@@ -263,21 +263,43 @@ class Worker:
                 work.send(due)
             if not due:
                 return
-            for one in due:
-                etag, doubtful = etags.get(one.reference, ""), doubts.get(one.reference, ())
-                try:
-                    sent = sink.put(one.reference, one.content, etag, doubtful)
-                except RetryError as error:
-                    done.notices.append(f"writing stopped: {error}")
-                    return
-                with self._store.transaction() as work:
-                    if sent.fate is Fate.DONE:
-                        work.confirm(one, sent.etag, self._now())
-                        done.written += not one.withdrawal
-                        done.withdrawn += one.withdrawal
-                    else:
-                        failed.add(one.reference)
-                        work.fail(one.reference, sent.problem, dead=sent.fate is Fate.DEAD)
+            try:
+                for one, sent in self._sent(sink, due, etags, doubts):
+                    with self._store.transaction() as work:
+                        if sent.fate is Fate.DONE:
+                            work.confirm(one, sent.etag, self._now())
+                            done.written += not one.withdrawal
+                            done.withdrawn += one.withdrawal
+                        else:
+                            failed.add(one.reference)
+                            work.fail(one.reference, sent.problem, dead=sent.fate is Fate.DEAD)
+            except RetryError as error:
+                done.notices.append(f"writing stopped: {error}")
+                return
+
+    def _sent(
+        self, sink: ServerSink, due: Sequence[Entry], etags: dict[str, str], doubts: dict[str, list[bytes]]
+    ) -> Iterator[tuple[Entry, Delivered]]:
+        """Send what is due: in batches where the settings say so, but what may have arrived before one by one."""
+        together = [one for one in due if one.reference not in doubts]
+        refused: list[Entry] = [one for one in due if one.reference in doubts]
+        most = self._settings.write_together
+        for start in range(0, len(together), most):
+            some = together[start : start + most]
+            if len(some) == 1:
+                refused += some
+                continue
+            answers = sink.put_together([(one.reference, one.content, etags.get(one.reference, "")) for one in some])
+            for one, answer in zip(some, answers, strict=True):
+                if answer is None:
+                    refused.append(one)
+                else:
+                    yield one, answer
+        for one in refused:
+            yield (
+                one,
+                sink.put(one.reference, one.content, etags.get(one.reference, ""), doubts.get(one.reference, ())),
+            )
 
 
 def _ended(ends: dict[int, tuple[Bucket, Reason | None]], kept: KeptInMemory) -> list[Ended]:

@@ -279,6 +279,21 @@ def test_with_a_token_and_without(tmp_path: Path, monkeypatch: pytest.MonkeyPatc
         assert site.cycle().written == 0
 
 
+def test_in_batches_the_same_is_written(site: Site, tmp_path: Path) -> None:
+    inputs = ward((2,), 120)
+    site.put(*inputs)
+    assert site.cycle(write_together=50).dead == 0
+    assert site.standing() == replayed(site, inputs, tmp_path / "replay")
+    assert set(site.versions().values()) == {"1"}
+    assert site.cycle(write_together=50).written == 0
+    (haemoglobin,) = first_gas(inputs, 2, "14775-1")
+    haemoglobin["status"] = "corrected"
+    haemoglobin["valueQuantity"]["value"] = 9.5
+    site.put(haemoglobin)
+    assert site.cycle(write_together=50).written > 0
+    assert site.standing() == replayed(site, inputs, tmp_path / "again")
+
+
 def test_a_dry_run_sends_nothing_and_a_real_one_then_all(site: Site) -> None:
     site.put(*ward((2,), 120))
     dry = site.cycle(write=False)

@@ -118,6 +118,19 @@ class _Writes(msgspec.Struct):
     entry: tuple[_Written, ...] = ()
 
 
+class _Response(msgspec.Struct):
+    status: str = ""
+    etag: str | None = None
+
+
+class _Answered(msgspec.Struct):
+    response: _Response = msgspec.field(default_factory=_Response)
+
+
+class _Answers(msgspec.Struct):
+    entry: tuple[_Answered, ...] = ()
+
+
 _OUTCOME = b'"OperationOutcome"'
 _UNREADABLE = (msgspec.MsgspecError, UnicodeDecodeError, RecursionError)
 _CODE = re.compile(r"[a-z-]{1,30}")
@@ -196,6 +209,19 @@ def page(body: bytes, names: Collection[str], place: str) -> tuple[Page, str | N
             entries.append(Entry(resource, entry.fullUrl or "", mode))
     links = {link.relation: link.url for link in reversed(bundle.link)}
     return Page(tuple(entries), links.get("self"), tuple(outcomes), bundle.total), links.get("next"), refused
+
+
+def batch_answers(body: bytes) -> list[tuple[int, str]]:
+    """Status and ETag ('' where there is none) of each entry of a batch's answer; empty if ``body`` is none."""
+    try:
+        bundle = msgspec.json.decode(body, type=_Answers)
+    except _UNREADABLE:
+        return []
+    found = []
+    for entry in bundle.entry:
+        status = entry.response.status[:3]
+        found.append((int(status) if status.isdigit() else 0, entry.response.etag or ""))
+    return found
 
 
 def _outcome(body: bytes) -> _Outcome | None:

@@ -8,8 +8,8 @@ from dataclasses import dataclass
 from enum import StrEnum
 from typing import Any
 
-from fhiro2.errors import StopError
-from fhiro2.fhir.answers import Answer
+from fhiro2.errors import RetryError, StopError
+from fhiro2.fhir.answers import Answer, batch_answers
 from fhiro2.fhir.client import Client
 
 
@@ -51,6 +51,25 @@ class ServerSink:
                 etag = there.etag or ""
         return self._judged(reference, content, self._client.update(reference, content, etag or None))
 
+    def put_together(self, writes: Sequence[tuple[str, bytes, str]]) -> list[Delivered | None]:
+        """Several resources (reference, content, ETag) in one batch, each on its own merits.
+
+        None is for those that the server did not take: ``put`` finds out why. Raises StopError where it takes no
+        batches at all.
+        """
+        entries = [_entry(reference, content, etag) for reference, content, etag in writes]
+        answer = self._client.send_bundle(_BATCH % b",".join(entries))
+        if answer.status == 413:
+            return [None] * len(writes)
+        if answer.status != 200:
+            raise StopError(
+                f"POST Bundle: the server takes no batches (status {answer.status}); set write_together to 1"
+            )
+        answers = batch_answers(answer.body)
+        if len(answers) != len(writes):
+            raise RetryError("POST Bundle: the answer has another number of entries than the request")
+        return [Delivered(Fate.DONE, etag) if status in (200, 201) else None for status, etag in answers]
+
     def _judged(self, reference: str, content: bytes, answer: Answer) -> Delivered:
         if answer.status in (200, 201):
             return Delivered(Fate.DONE, answer.etag or "")
@@ -70,6 +89,15 @@ class ServerSink:
             )
         codes = ", ".join(sorted({issue.code for issue in answer.issues})) or "no reason given"
         return Delivered(Fate.DEAD, problem=f"refused with status {answer.status} ({codes})")
+
+
+_BATCH = b'{"resourceType":"Bundle","type":"batch","entry":[%s]}'
+
+
+def _entry(reference: str, content: bytes, etag: str) -> bytes:
+    guard = {"ifMatch": etag} if etag else {"ifNoneMatch": "*"}
+    request = json.dumps({"method": "PUT", "url": reference, **guard}).encode()
+    return b'{"resource":%s,"request":%s}' % (content, request)
 
 
 def holds(body: bytes, content: bytes) -> bool:
