@@ -10,6 +10,7 @@ import hashlib
 import json
 from collections.abc import Callable, Iterable, Iterator, Sequence
 from dataclasses import dataclass, field
+from datetime import UTC, datetime
 from typing import Any
 
 import msgspec
@@ -20,14 +21,15 @@ from fhiro2.admit.envelope import is_own
 from fhiro2.assess import assess
 from fhiro2.bulk.intake import take_in
 from fhiro2.bulk.quarantine import KeptInMemory
+from fhiro2.bulk.stored import Stored, ended
 from fhiro2.codes import code_table
 from fhiro2.errors import Bucket, Reason, RetryError
 from fhiro2.fhir.wire import content_hash
 from fhiro2.judge import Pack
-from fhiro2.read import Raw
-from fhiro2.read.server import Found, Poll, ServerSource
+from fhiro2.model import MICROSECONDS
+from fhiro2.read.server import Found, Poll, ServerSource, escaped
 from fhiro2.settings import Mapping, Settings
-from fhiro2.store import Ended, Received, Store, Transaction
+from fhiro2.store import Received, Store, Transaction
 from fhiro2.store.difference import by_reference, difference
 from fhiro2.store.entry import DEAD, Entry
 from fhiro2.timeline import batches
@@ -40,8 +42,9 @@ from fhiro2.write.values import values
 
 PATIENTS_AT_ONCE = 50
 WRITES_AT_ONCE = 50
-OBSERVATIONS = "Observation"
-_CONTEXT_KINDS = tuple(sorted(CONTEXT_TYPES))
+CODES_AT_ONCE = 40
+OF_PATIENTS = ("Condition", "Device", "Encounter", "MedicationAdministration", "Procedure")
+"""What states facts about a patient and is not referred to by Observations."""
 
 
 @dataclass
@@ -62,18 +65,20 @@ class Cycle:
     notices: list[str] = field(default_factory=list)
 
 
-class Stored:
-    """A source of the core that reads stored versions: each line number is the row of a version."""
+@dataclass(frozen=True)
+class _Stream:
+    """One search that each cycle asks again; its name changes with its codes, so that it then begins anew."""
 
-    def __init__(self, name: str, rows: Sequence[tuple[int, bytes]]) -> None:
-        self.name = name
-        self._rows = rows
+    kind: str
+    codes: tuple[str, ...] = ()
 
-    def read(self, leave_out: bytes | None = None) -> Iterator[Raw]:
-        """All of them but those beginning with ``leave_out``."""
-        for row, content in self._rows:
-            if leave_out is None or not content.startswith(leave_out):
-                yield Raw(content, 0, row)
+    @property
+    def name(self) -> str:
+        return (
+            " ".join((self.kind, hashlib.sha256(",".join(self.codes).encode()).hexdigest()))
+            if self.codes
+            else self.kind
+        )
 
 
 class Worker:
@@ -114,8 +119,9 @@ class Worker:
             self._write(self._sink, done)
         with self._store.transaction() as work:
             waiting = work.outbox()
-        done.waiting = sum(one.state != DEAD for one in waiting)
-        done.dead = len(waiting) - done.waiting
+        dead = {one.reference for one in waiting if one.state == DEAD}
+        done.dead = len(dead)
+        done.waiting = sum(one.reference not in dead and one.after not in dead for one in waiting)
         return done
 
     # --- read ---
@@ -123,44 +129,65 @@ class Worker:
     def _read(self, done: Cycle) -> dict[str, str]:
         """Keep all that is new; returns how far each stream goes once all of it is done."""
         cursors = {}
+        streams = [*self._observations(), *map(_Stream, sorted(CONTEXT_TYPES))]
         with self._store.transaction() as work:
-            since = {kind: work.cursor(self._name, kind) for kind in (OBSERVATIONS, *_CONTEXT_KINDS)}
+            since = {stream.name: work.cursor(self._name, stream.name) for stream in streams}
         first = self._settings.server.since or "" if self._settings.server else ""
-        for kind in (OBSERVATIONS, *_CONTEXT_KINDS):
-            poll = Poll()
-            codes = self._codes() if kind == OBSERVATIONS else ()
-            for page in self._source.changed(kind, since[kind] or first, poll, codes):
-                self._keep(page, done, only_known=kind != OBSERVATIONS)
-            done.foreign += poll.foreign + poll.unreadable
+        for stream in streams:
+            start = since[stream.name] or first
+            poll = self._poll(start)
+            pages = self._source.changed(stream.kind, start, poll, stream.codes)
+            self._keep_all(pages, poll, done, only_known=not stream.codes)
             if poll.updated:
-                cursors[kind] = poll.updated
+                cursors[stream.name] = poll.updated
         return cursors
 
-    def _codes(self) -> list[str]:
-        """All codes that are read, the site's own among them, as a search asks for them."""
-        site = [f"{row.system}|{row.code}" for row in self._mapping.codes]
-        return sorted({*(f"{system}|{code}" for system, code in code_table()), *site})
+    def _observations(self) -> Iterator[_Stream]:
+        """All codes that are read, the site's own after the shipped ones, as many as one search asks for."""
+        shipped = sorted(f"{system}|{code}" for system, code in code_table())
+        site = sorted({f"{row.system}|{row.code}" for row in self._mapping.codes} - set(shipped))
+        for codes in (shipped, site):
+            for start in range(0, len(codes), CODES_AT_ONCE):
+                yield _Stream("Observation", tuple(codes[start : start + CODES_AT_ONCE]))
+
+    def _poll(self, since: str = "") -> Poll:
+        return Poll(datetime.fromtimestamp(self._now() / MICROSECONDS, UTC), since)
+
+    def _keep_all(self, pages: Iterable[list[Found]], poll: Poll, done: Cycle, *, only_known: bool = True) -> None:
+        for page in pages:
+            self._keep(page, done, only_known=only_known)
+        if poll.foreign:
+            done.received += poll.foreign
+            done.foreign += poll.foreign
+            with self._store.transaction() as work:
+                work.count("foreign", poll.foreign)
 
     def _keep(self, found: Sequence[Found], done: Cycle, *, only_known: bool) -> None:
+        """Keep what is wanted, and what cannot be read, since nobody knows whether it is."""
         with self._store.transaction() as work:
             wanted = self._wanted(work, found) if only_known else {one.label.key for one in found}
             for one in found:
                 done.received += 1
                 if is_own(one.resource.get("identifier")):
                     work.count("own-output")
-                elif one.label.key not in wanted:
+                elif one.label.key and one.label.key not in wanted:
                     work.count("foreign")
                     done.foreign += 1
                 elif not work.keep(self._received(one)):
                     done.repeated += 1
 
     def _wanted(self, work: Transaction, found: Sequence[Found]) -> set[str]:
-        """Of context: what is referred to, or is of a patient of whom there is something."""
-        patients = {one.label.patient for one in found}
-        known = work.patients(self._name) & patients
-        keys = [one.label.key for one in found]
-        there = work.has(self._name, keys) | (set(keys) & set(work.missing_targets(self._name)))
-        return there | {one.label.key for one in found if one.label.patient in known}
+        """Of context: what is referred to, is of a patient of whom there is something, or says who such a one is."""
+        labels = [one.label for one in found]
+        known = work.patients(self._name) | work.has(self._name, [one.key for one in labels])
+        known.update(work.missing_targets(self._name))
+        known.update(f"identifier {one}" for one in work.unknown_identifiers(self._name))
+        known.discard("")
+        return {
+            one.key
+            for one in labels
+            if known & {one.key, one.patient, *(one.targets if one.key.startswith("Patient/") else ())}
+        }
 
     def _received(self, one: Found) -> Received:
         return Received(
@@ -175,18 +202,24 @@ class Worker:
 
     def _fetch_missing(self, done: Cycle) -> None:
         """Ask once for all that is referred to and not there; what the server does not have is asked for next time."""
-        asked: set[str] = set()
+        asked: set[tuple[str, str, str]] = set()
         while True:
             with self._store.transaction() as work:
-                keys = [
-                    key
-                    for key in work.missing_targets(self._name)
-                    if key not in asked and key.partition("/")[0] in CONTEXT_TYPES
-                ]
-            if not keys:
+                keys = [key.partition("/") for key in work.missing_targets(self._name)]
+                sought = {(kind, "_id", identity) for kind, _, identity in keys if kind in CONTEXT_TYPES}
+                sought |= {("Patient", "identifier", escaped(one)) for one in work.unknown_identifiers(self._name)}
+                new = work.new_patients(self._name)
+            sought |= {(kind, "patient", patient) for kind in OF_PATIENTS for patient in new}
+            if not sought - asked:
                 return
-            asked.update(keys)
-            self._keep(list(self._source.named(keys)), done, only_known=False)
+            for kind, name in sorted({(kind, name) for kind, name, _ in sought - asked}):
+                values = sorted(value for *what, value in sought - asked if (kind, name) == tuple(what))
+                poll = self._poll()
+                self._keep_all(self._source.having(kind, name, values, poll), poll, done)
+            asked |= sought
+            with self._store.transaction() as work:
+                for patient in new:
+                    work.set_cursor(self._name, patient, self._recorded())
 
     # --- compute ---
 
@@ -222,8 +255,9 @@ class Worker:
             done.held += outcome.held
             wanted |= self._rendered(outcome, run, group)
         done.patients += len(group)
+        done.flags += sum(reference.startswith("Flag/") for reference in wanted)
         with self._store.transaction() as work:
-            work.end(_ended(ends, kept))
+            work.end(ended(ends, kept.refusals))
             if group:
                 done.to_write += _post(work, group, wanted, run)
 
@@ -243,8 +277,7 @@ class Worker:
         failed: set[str] = set()
         while True:
             with self._store.transaction() as work:
-                waiting = [one for one in work.outbox() if one.state != DEAD and one.reference not in failed]
-                due = _due(waiting)[:WRITES_AT_ONCE]
+                due = work.due(failed, WRITES_AT_ONCE)
                 references = [one.reference for one in due]
                 etags = {one.reference: one.etag for one in work.written(references)}
                 doubts = work.doubts(references)
@@ -266,29 +299,6 @@ class Worker:
                     else:
                         failed.add(one.reference)
                         work.fail(one.reference, sent.problem, dead=sent.fate is Fate.DEAD)
-
-
-def _due(waiting: Sequence[Entry]) -> list[Entry]:
-    """What may be written now: nothing whose target still waits."""
-    unwritten = {one.reference for one in waiting}
-    return [one for one in waiting if one.after not in unwritten]
-
-
-def _ended(ends: dict[int, tuple[Bucket, Reason | None]], kept: KeptInMemory) -> list[Ended]:
-    details: dict[int, str] = {}
-    parts: dict[int, list[str]] = {}
-    for refusal in kept.refusals:
-        if refusal.part is None:
-            details[refusal.line] = refusal.detail
-        else:
-            parts.setdefault(refusal.line, []).append(refusal.reason)
-            details.setdefault(refusal.line, refusal.detail)
-    return [
-        Ended(
-            row, bucket.value, "" if reason is None else reason.value, details.get(row, ""), tuple(parts.get(row, ()))
-        )
-        for row, (bucket, reason) in ends.items()
-    ]
 
 
 class _Subject(msgspec.Struct):

@@ -66,21 +66,16 @@ class WrittenResources:
         asked = select(OUTBOX).order_by(OUTBOX.c.sequence)
         if patients is not None:
             asked = asked.where(OUTBOX.c.patient.in_(list(patients)))
-        return [
-            Entry(
-                row.reference,
-                row.patient,
-                row.hash,
-                bytes(row.content),
-                state=row.state,
-                after=row.after,
-                withdrawal=bool(row.withdrawal),
-                sequence=int(row.sequence),
-                attempts=int(row.attempts),
-                problem=row.problem,
-            )
-            for row in self._connection.execute(asked)
-        ]
+        return [_waiting(row) for row in self._connection.execute(asked)]
+
+    def due(self, failed: Iterable[str], most: int) -> list[Entry]:
+        """What may be written now, in order: neither dead nor ``failed``, and nothing whose target is not written."""
+        asked = select(OUTBOX).where(
+            OUTBOX.c.state != DEAD,
+            OUTBOX.c.reference.not_in(list(failed)),
+            OUTBOX.c.after.not_in(select(OUTBOX.c.reference)),
+        )
+        return [_waiting(row) for row in self._connection.execute(asked.order_by(OUTBOX.c.sequence).limit(most))]
 
     def send(self, entries: Sequence[Entry]) -> None:
         """Note that these outbox entries are now sent: until they are confirmed the server may hold their content."""
@@ -125,6 +120,21 @@ class WrittenResources:
 def _in_doubt_or_new() -> Any:
     """What is in flight stays in doubt with its new content: the server may have the old one by now."""
     return func.iif(OUTBOX.c.state == IN_FLIGHT, IN_FLIGHT, NEW)
+
+
+def _waiting(row: Any) -> Entry:
+    return Entry(
+        row.reference,
+        row.patient,
+        row.hash,
+        bytes(row.content),
+        state=row.state,
+        after=row.after,
+        withdrawal=bool(row.withdrawal),
+        sequence=int(row.sequence),
+        attempts=int(row.attempts),
+        problem=row.problem,
+    )
 
 
 def _written(row: Any) -> Entry:
