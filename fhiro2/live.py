@@ -49,18 +49,14 @@ def run_once(settings: Settings, mapping: Mapping, pack: Pack) -> Cycle:
         ca_file=server.ca_file,
         limits=Limits(silence=server.timeout_seconds),
     )
-    source = ServerSource(
-        client, (server.url, *settings.base_urls), server.page_size, timedelta(minutes=server.overlap_minutes)
-    )
+    settings = settings.model_copy(update={"base_urls": (server.url, *settings.base_urls)})
+    source = ServerSource(client, settings.base_urls, server.page_size, timedelta(minutes=server.overlap_minutes))
     store = Store(settings.store)
     holder = f"{socket.gethostname()}:{os.getpid()}"
     try:
-        store.take_lease(holder, _now(), _now() + LEASE_SECONDS * 1_000_000, may_be_alive)
-        try:
+        with store.leased(holder, _now, LEASE_SECONDS * 1_000_000, may_be_alive):
             sink = ServerSink(client) if settings.write else None
             return Worker(source, sink, store, settings, mapping, pack, server.name, _now, _recorded).cycle()
-        finally:
-            store.give_up_lease(holder)
     finally:
         store.close()
 

@@ -7,42 +7,36 @@ What is computed for a patient is what a replay of all their stored resources gi
 from __future__ import annotations
 
 import hashlib
-import json
 from collections.abc import Callable, Iterable, Iterator, Sequence
 from dataclasses import dataclass, field
-from typing import Any
-
-import msgspec
+from datetime import UTC, datetime
 
 from fhiro2 import __version__
 from fhiro2.admit.context import CONTEXT_TYPES
 from fhiro2.admit.envelope import is_own
 from fhiro2.assess import assess
+from fhiro2.bulk.delivery import deliver
 from fhiro2.bulk.intake import take_in
+from fhiro2.bulk.posting import Wanted, post, rendered
 from fhiro2.bulk.quarantine import KeptInMemory
+from fhiro2.bulk.stored import Stored, ended
 from fhiro2.codes import code_table
-from fhiro2.errors import Bucket, Reason, RetryError
+from fhiro2.errors import Bucket, Reason
 from fhiro2.fhir.wire import content_hash
 from fhiro2.judge import Pack
-from fhiro2.read import Raw
-from fhiro2.read.server import Found, Poll, ServerSource
+from fhiro2.model import MICROSECONDS
+from fhiro2.read.server import Found, Poll, ServerSource, escaped
 from fhiro2.settings import Mapping, Settings
-from fhiro2.store import Ended, Received, Store, Transaction
-from fhiro2.store.difference import by_reference, difference
-from fhiro2.store.entry import DEAD, Entry
+from fhiro2.store import Received, Store, Transaction
 from fhiro2.timeline import batches
 from fhiro2.write import Run
-from fhiro2.write.flag import flags
-from fhiro2.write.identity import SOFTWARE_REFERENCE
-from fhiro2.write.provenance import software, withdrawal
-from fhiro2.write.server import Delivered, Fate, ServerSink
-from fhiro2.write.values import values
+from fhiro2.write.server import ServerSink
 
 PATIENTS_AT_ONCE = 50
-WRITES_AT_ONCE = 200
-OBSERVATIONS = "Observation"
 BASIS = "basis"
-_CONTEXT_KINDS = tuple(sorted(CONTEXT_TYPES))
+CODES_AT_ONCE = 40
+OF_PATIENTS = ("Condition", "Device", "Encounter", "MedicationAdministration", "Procedure")
+"""What states facts about a patient and is not referred to by Observations."""
 
 
 @dataclass
@@ -63,18 +57,18 @@ class Cycle:
     notices: list[str] = field(default_factory=list)
 
 
-class Stored:
-    """A source of the core that reads stored versions: each line number is the row of a version."""
+@dataclass(frozen=True)
+class _Stream:
+    """One search that each cycle asks again; its name changes with its codes, so that it then begins anew."""
 
-    def __init__(self, name: str, rows: Sequence[tuple[int, bytes]]) -> None:
-        self.name = name
-        self._rows = rows
+    kind: str
+    codes: tuple[str, ...] = ()
 
-    def read(self, leave_out: bytes | None = None) -> Iterator[Raw]:
-        """All of them but those beginning with ``leave_out``."""
-        for row, content in self._rows:
-            if leave_out is None or not content.startswith(leave_out):
-                yield Raw(content, 0, row)
+    @property
+    def name(self) -> str:
+        """The name of its cursor."""
+        digest = hashlib.sha256(",".join(self.codes).encode()).hexdigest()
+        return f"{self.kind} {digest}" if self.codes else self.kind
 
 
 class Worker:
@@ -112,56 +106,81 @@ class Worker:
             for stream, updated in cursors.items():
                 work.set_cursor(self._name, stream, updated)
         if self._sink is not None:
-            self._write(self._sink, done)
+            self._deliver(self._sink, done)
         with self._store.transaction() as work:
-            waiting = work.outbox()
-        done.waiting = sum(one.state != DEAD for one in waiting)
-        done.dead = len(waiting) - done.waiting
+            done.dead, done.waiting = work.counts()
         return done
+
+    def _deliver(self, sink: ServerSink, done: Cycle) -> None:
+        found = deliver(self._store, sink, self._settings.write_together, self._now)
+        done.written, done.withdrawn = found.written, found.withdrawn
+        if found.stopped:
+            done.notices.append(f"writing stopped: {found.stopped}")
 
     # --- read ---
 
     def _read(self, done: Cycle) -> dict[str, str]:
         """Keep all that is new; returns how far each stream goes once all of it is done."""
         cursors = {}
+        streams = [*self._observations(), *map(_Stream, sorted(CONTEXT_TYPES))]
         with self._store.transaction() as work:
-            since = {kind: work.cursor(self._name, kind) for kind in (OBSERVATIONS, *_CONTEXT_KINDS)}
+            since = {stream.name: work.cursor(self._name, stream.name) for stream in streams}
         first = self._settings.server.since or "" if self._settings.server else ""
-        for kind in (OBSERVATIONS, *_CONTEXT_KINDS):
-            poll = Poll()
-            codes = self._codes() if kind == OBSERVATIONS else ()
-            for page in self._source.changed(kind, since[kind] or first, poll, codes):
-                self._keep(page, done, only_known=kind != OBSERVATIONS)
-            done.foreign += poll.foreign + poll.unreadable
+        for stream in streams:
+            start = since[stream.name] or first
+            poll = self._poll(start)
+            pages = self._source.changed(stream.kind, start, poll, stream.codes)
+            self._keep_all(pages, poll, done, only_known=not stream.codes)
             if poll.updated:
-                cursors[kind] = poll.updated
+                cursors[stream.name] = poll.updated
         return cursors
 
-    def _codes(self) -> list[str]:
-        """All codes that are read, the site's own among them, as a search asks for them."""
-        site = [f"{row.system}|{row.code}" for row in self._mapping.codes]
-        return sorted({*(f"{system}|{code}" for system, code in code_table()), *site})
+    def _observations(self) -> Iterator[_Stream]:
+        """All codes that are read, the site's own after the shipped ones, as many as one search asks for."""
+        shipped = sorted(f"{system}|{code}" for system, code in code_table())
+        site = sorted({f"{row.system}|{row.code}" for row in self._mapping.codes} - set(shipped))
+        for codes in (shipped, site):
+            for start in range(0, len(codes), CODES_AT_ONCE):
+                yield _Stream("Observation", tuple(codes[start : start + CODES_AT_ONCE]))
+
+    def _poll(self, since: str = "") -> Poll:
+        return Poll(datetime.fromtimestamp(self._now() / MICROSECONDS, UTC), since)
+
+    def _keep_all(self, pages: Iterable[list[Found]], poll: Poll, done: Cycle, *, only_known: bool = True) -> None:
+        for page in pages:
+            self._keep(page, done, only_known=only_known)
+        if poll.foreign:
+            done.received += poll.foreign
+            done.foreign += poll.foreign
+            with self._store.transaction() as work:
+                work.count("foreign", poll.foreign)
 
     def _keep(self, found: Sequence[Found], done: Cycle, *, only_known: bool) -> None:
+        """Keep what is wanted, and what cannot be read, since nobody knows whether it is."""
         with self._store.transaction() as work:
             wanted = self._wanted(work, found) if only_known else {one.label.key for one in found}
             for one in found:
                 done.received += 1
                 if is_own(one.resource.get("identifier")):
                     work.count("own-output")
-                elif one.label.key not in wanted:
+                elif one.label.key and one.label.key not in wanted:
                     work.count("foreign")
                     done.foreign += 1
                 elif not work.keep(self._received(one)):
                     done.repeated += 1
 
     def _wanted(self, work: Transaction, found: Sequence[Found]) -> set[str]:
-        """Of context: what is referred to, or is of a patient of whom there is something."""
-        patients = {one.label.patient for one in found}
-        known = work.patients(self._name) & patients
-        keys = [one.label.key for one in found]
-        there = work.has(self._name, keys) | (set(keys) & set(work.missing_targets(self._name)))
-        return there | {one.label.key for one in found if one.label.patient in known}
+        """Of context: what is referred to, is of a patient of whom there is something, or says who such a one is."""
+        labels = [one.label for one in found]
+        known = work.patients(self._name) | work.has(self._name, [one.key for one in labels])
+        known.update(work.missing_targets(self._name))
+        known.update(f"identifier {one}" for one in work.unknown_identifiers(self._name))
+        known.discard("")
+        return {
+            one.key
+            for one in labels
+            if known & {one.key, one.patient, *(one.targets if one.key.startswith("Patient/") else ())}
+        }
 
     def _received(self, one: Found) -> Received:
         return Received(
@@ -176,18 +195,24 @@ class Worker:
 
     def _fetch_missing(self, done: Cycle) -> None:
         """Ask once for all that is referred to and not there; what the server does not have is asked for next time."""
-        asked: set[str] = set()
+        asked: set[tuple[str, str, str]] = set()
         while True:
             with self._store.transaction() as work:
-                keys = [
-                    key
-                    for key in work.missing_targets(self._name)
-                    if key not in asked and key.partition("/")[0] in CONTEXT_TYPES
-                ]
-            if not keys:
+                keys = [key.partition("/") for key in work.missing_targets(self._name)]
+                sought = {(kind, "_id", identity) for kind, _, identity in keys if kind in CONTEXT_TYPES}
+                sought |= {("Patient", "identifier", escaped(one)) for one in work.unknown_identifiers(self._name)}
+                new = work.new_patients(self._name)
+            sought |= {(kind, "patient", patient) for kind in OF_PATIENTS for patient in new}
+            if not sought - asked:
                 return
-            asked.update(keys)
-            self._keep(list(self._source.named(keys)), done, only_known=False)
+            for kind, name in sorted({(kind, name) for kind, name, _ in sought - asked}):
+                values = sorted(value for *what, value in sought - asked if (kind, name) == tuple(what))
+                poll = self._poll()
+                self._keep_all(self._source.having(kind, name, values, poll), poll, done)
+            asked |= sought
+            with self._store.transaction() as work:
+                for patient in new:
+                    work.set_cursor(self._name, patient, self._recorded())
 
     # --- compute ---
 
@@ -227,176 +252,16 @@ class Worker:
             ends[line] = bucket, reason
 
         intake = take_in([Stored(self._name, rows)], self._settings, self._mapping, kept, ends=end)
-        wanted: dict[str, tuple[Entry, Entry]] = {}
+        wanted: Wanted = {}
         held: set[str] = set()
         for timelines in batches(intake.readings, intake.rows.names, intake.rows.origins, intake.roster):
             outcome, _ = assess(timelines, self._settings, self._pack)
             held |= {patient.reference for patient in timelines.patients if patient.key in outcome.held}
-            wanted |= self._rendered(outcome, run, group)
+            wanted |= rendered(outcome, run, group)
         done.held += tuple(sorted(held & group))
         done.patients += len(group)
+        done.flags += sum(reference.startswith("Flag/") for reference in wanted)
         with self._store.transaction() as work:
-            work.end(_ended(ends, kept))
+            work.end(ended(ends, kept.refusals))
             if group:
-                done.to_write += _post(work, group, wanted, held, run)
-
-    def _rendered(self, outcome: Any, run: Run, group: set[str]) -> dict[str, tuple[Entry, Entry]]:
-        """What stands for the patients of ``group``: each resource with its Provenance, by reference."""
-        found: dict[str, tuple[Entry, Entry]] = {}
-        hashes: dict[str, str] = {}
-        for block in values(outcome, run):
-            hashes.update(zip(block.ids, block.hashes, strict=True))
-            found |= _entries("Observation", zip(block.lines, block.provenance, strict=True), group)
-        return found | _entries("Flag", flags(outcome, run, hashes), group)
-
-    # --- write ---
-
-    def _write(self, sink: ServerSink, done: Cycle) -> None:
-        """Send what waits, in order; stops quietly where the server cannot be reached, to go on in the next cycle."""
-        failed: set[str] = set()
-        while True:
-            with self._store.transaction() as work:
-                due = work.due(WRITES_AT_ONCE, failed)
-                references = [one.reference for one in due]
-                etags = {one.reference: one.etag for one in work.written(references)}
-                doubts = work.doubts(references)
-                work.send(due)
-            if not due:
-                return
-            try:
-                for one, sent in self._sent(sink, due, etags, doubts):
-                    with self._store.transaction() as work:
-                        if sent.fate is Fate.DONE:
-                            work.confirm(one, sent.etag, self._now())
-                            done.written += not one.withdrawal
-                            done.withdrawn += one.withdrawal
-                        else:
-                            failed.add(one.reference)
-                            work.fail(one.reference, sent.problem, dead=sent.fate is Fate.DEAD)
-            except RetryError as error:
-                done.notices.append(f"writing stopped: {error}")
-                return
-
-    def _sent(
-        self, sink: ServerSink, due: Sequence[Entry], etags: dict[str, str], doubts: dict[str, list[bytes]]
-    ) -> Iterator[tuple[Entry, Delivered]]:
-        """Send what is due: in batches where the settings say so, but what may have arrived before one by one."""
-        together = [one for one in due if one.reference not in doubts]
-        refused: list[Entry] = [one for one in due if one.reference in doubts]
-        most = self._settings.write_together
-        for start in range(0, len(together), most):
-            some = together[start : start + most]
-            if len(some) == 1:
-                refused += some
-                continue
-            answers = sink.put_together([(one.reference, one.content, etags.get(one.reference, "")) for one in some])
-            for one, answer in zip(some, answers, strict=True):
-                if answer is None:
-                    refused.append(one)
-                else:
-                    yield one, answer
-        for one in refused:
-            yield (
-                one,
-                sink.put(one.reference, one.content, etags.get(one.reference, ""), doubts.get(one.reference, ())),
-            )
-
-
-def _ended(ends: dict[int, tuple[Bucket, Reason | None]], kept: KeptInMemory) -> list[Ended]:
-    details: dict[int, str] = {}
-    parts: dict[int, list[str]] = {}
-    for refusal in kept.refusals:
-        if refusal.part is None:
-            details[refusal.line] = refusal.detail
-        else:
-            parts.setdefault(refusal.line, []).append(refusal.reason)
-            details.setdefault(refusal.line, refusal.detail)
-    return [
-        Ended(
-            row, bucket.value, "" if reason is None else reason.value, details.get(row, ""), tuple(parts.get(row, ()))
-        )
-        for row, (bucket, reason) in ends.items()
-    ]
-
-
-class _Subject(msgspec.Struct):
-    reference: str
-
-
-class _Ours(msgspec.Struct):
-    id: str
-    subject: _Subject
-
-
-_OURS = msgspec.json.Decoder(_Ours)
-
-
-class _Identified(msgspec.Struct):
-    id: str
-
-
-_IDENTIFIED = msgspec.json.Decoder(_Identified)
-
-
-def _entries(kind: str, lines: Iterable[tuple[bytes, str]], group: set[str]) -> dict[str, tuple[Entry, Entry]]:
-    found = {}
-    for line, provenance in lines:
-        ours = _OURS.decode(line)
-        if ours.subject.reference in group:
-            reference = f"{kind}/{ours.id}"
-            found[reference] = (
-                Entry(reference, ours.subject.reference, hashlib.sha256(line).hexdigest(), line),
-                _provenance(provenance, ours.subject.reference, reference),
-            )
-    return found
-
-
-def _provenance(line: str, patient: str, target: str) -> Entry:
-    content = line.encode()
-    return Entry(
-        f"Provenance/{_IDENTIFIED.decode(content).id}",
-        patient,
-        hashlib.sha256(content).hexdigest(),
-        content,
-        after=target,
-    )
-
-
-def _post(work: Transaction, group: set[str], wanted: dict[str, tuple[Entry, Entry]], held: set[str], run: Run) -> int:
-    """Put into the outbox what differs from what the server has, and take out what need not be written any more.
-
-    The flags of patients who are ``held`` stay as they are: nothing is known of what should stand.
-    """
-
-    def left_alone(one: Entry) -> bool:
-        return one.patient in held and one.reference.startswith("Flag/")
-
-    outbox = [one for one in work.outbox(group) if not left_alone(one)]
-    ledger = [one for one in work.ledger(group).values() if not left_alone(one)]
-    found = difference(wanted, by_reference(ledger), by_reference(outbox), lambda one: _withdrawn(one, run))
-    again = found.drop | {one.reference for one, _ in found.post}
-    work.unpost(found.drop | {one.reference for one in outbox if one.after in again})
-    device = _device(run)
-    known = [
-        *work.written([device.reference]),
-        *(one for one in work.outbox({""}) if one.reference == device.reference),
-    ]
-    if found.post and all(one.hash != device.hash for one in known):
-        work.post([device])
-    work.post([*(one for one, _ in found.post), *(provenance for _, provenance in found.post)])
-    return len(found.post)
-
-
-def _device(run: Run) -> Entry:
-    content = software(run).encode()
-    return Entry(SOFTWARE_REFERENCE, "", hashlib.sha256(content).hexdigest(), content)
-
-
-def _withdrawn(one: Entry, run: Run) -> tuple[Entry, Entry]:
-    """What was written, as entered in error, with the Provenance that says since when."""
-    resource = json.loads(one.content)
-    resource["status"] = "entered-in-error"
-    content = json.dumps(resource, separators=(",", ":"), ensure_ascii=False).encode()
-    digest = hashlib.sha256(content).hexdigest()
-    entry = Entry(one.reference, one.patient, digest, content, withdrawal=True)
-    return entry, _provenance(withdrawal(run, one.reference, digest), one.patient, one.reference)
+                done.to_write += post(work, group, wanted, held, run)

@@ -2,8 +2,9 @@
 
 from __future__ import annotations
 
+import re
 from collections.abc import Iterator, Sequence
-from dataclasses import dataclass, field
+from dataclasses import dataclass
 from datetime import UTC, datetime, timedelta
 from typing import Any
 
@@ -13,13 +14,13 @@ from fhiro2.fhir.client import Client
 from fhiro2.fhir.wire import Door
 from fhiro2.read.label import Label, label
 
-IDS_AT_ONCE = 50
-CODES_AT_ONCE = 40
+VALUES_AT_ONCE = 50
+_NAMELESS = Label("", "", "", "", ())
 
 
 @dataclass(frozen=True)
 class Found:
-    """One resource as the server sent it, with its label."""
+    """One resource as the server sent it, with its label: '' all over where it cannot be read."""
 
     content: bytes
     resource: dict[str, Any]
@@ -28,18 +29,21 @@ class Found:
 
 @dataclass
 class Poll:
-    """What one stream brought: how far it now goes, and how many entries were not what was asked for."""
+    """What one stream brought: how far it now goes, and how many entries were not what was asked for.
 
+    It goes on from ``updated``, never back, and not beyond ``until``: a moment that is still to come would hide all
+    that is written before it.
+    """
+
+    until: datetime
     updated: str = ""
     foreign: int = 0
-    unreadable: int = 0
-    _greatest: datetime | None = field(default=None, repr=False)
 
     def note(self, updated: str) -> None:
         """Go as far as the greatest ``lastUpdated``, kept as the server wrote it."""
-        at = instant(updated)
-        if at is not None and (self._greatest is None or at > self._greatest):
-            self._greatest, self.updated = at, updated
+        at, before = instant(updated), instant(self.updated)
+        if at is not None and at <= self.until and (before is None or at > before):
+            self.updated = updated
 
 
 class ServerSource:
@@ -55,34 +59,26 @@ class ServerSource:
     def changed(self, kind: str, since: str, poll: Poll, codes: Sequence[str] = ()) -> Iterator[list[Found]]:
         """Page after page of what changed since ``since`` ('' for all), read a little further back, oldest first.
 
-        Each entry is looked at again: what is of another kind or has none of ``codes`` is counted and dropped. Raises
-        RetryError where the server says that something is missing in its answer.
+        Each entry is looked at again: what is of another kind or has none of ``codes`` is counted and dropped. What
+        cannot be read comes without a name. Raises RetryError where the server says that its answer is not whole.
         """
         asked = {"_sort": "_lastUpdated", "_count": str(self._page_size)}
         if since:
             asked["_lastUpdated"] = f"ge{self._from(since)}"
-        for start in range(0, max(len(codes), 1), CODES_AT_ONCE):
-            some = codes[start : start + CODES_AT_ONCE]
-            for page in self._pages(kind, {**asked, **({"code": ",".join(some)} if some else {})}):
-                found = list(self._read(page, kind, poll, frozenset(some)))
-                for one in found:
-                    poll.note(one.label.updated)
-                yield found
+        if codes:
+            asked["code"] = ",".join(codes)
+        for page in self._pages(kind, asked):
+            found = list(self._read(page, kind, poll, frozenset(codes)))
+            for one in found:
+                poll.note(one.label.updated)
+            yield found
 
-    def named(self, keys: Sequence[str]) -> Iterator[Found]:
-        """The resources ``keys`` (``Type/id``), as far as the server has them."""
-        by_kind: dict[str, list[str]] = {}
-        for key in keys:
-            kind, _, identity = key.partition("/")
-            by_kind.setdefault(kind, []).append(identity)
-        for kind, identities in by_kind.items():
-            for start in range(0, len(identities), IDS_AT_ONCE):
-                some = identities[start : start + IDS_AT_ONCE]
-                asked = {"_id": ",".join(some), "_count": str(len(some))}
-                for page in self._pages(kind, asked):
-                    for one in self._read(page, kind, Poll(), frozenset()):
-                        if one.label.key.partition("/")[2] in some:
-                            yield one
+    def having(self, kind: str, name: str, values: Sequence[str], poll: Poll) -> Iterator[list[Found]]:
+        """What has one of ``values`` by the search parameter ``name``, page after page; a server may give more."""
+        for start in range(0, len(values), VALUES_AT_ONCE):
+            some = values[start : start + VALUES_AT_ONCE]
+            for page in self._pages(kind, {name: ",".join(some), "_count": str(self._page_size)}):
+                yield list(self._read(page, kind, poll, frozenset()))
 
     def _pages(self, kind: str, asked: dict[str, str]) -> Iterator[Page]:
         for page in self._client.search(kind, list(asked.items())):
@@ -97,13 +93,12 @@ class ServerSource:
             try:
                 resource = self.door.resource(content)
             except SkipError:
-                poll.unreadable += 1
+                yield Found(content, {}, _NAMELESS)
                 continue
-            named = label(resource, self._base_urls)
-            if named is None or not named.key.startswith(f"{kind}/") or (codes and not codes & _codes(resource)):
+            if resource.get("resourceType") == kind and (not codes or codes & _codes(resource)):
+                yield Found(content, resource, label(resource, self._base_urls) or _NAMELESS)
+            else:
                 poll.foreign += 1
-                continue
-            yield Found(content, resource, named)
 
     def _from(self, since: str) -> str:
         at = instant(since)
@@ -119,12 +114,19 @@ def instant(text: str) -> datetime | None:
     return None if found.tzinfo is None else found.astimezone(UTC)
 
 
+def escaped(token: str) -> str:
+    """``system|value`` fit for a list of tokens in a search."""
+    system, _, value = token.partition("|")
+    return "|".join(re.sub(r"([\\,|$])", r"\\\1", part) for part in (system, value))
+
+
 def _codes(resource: dict[str, Any]) -> set[str]:
     """Codes of a resource and of its components, as ``system|code``."""
-    found = set()
-    for node in (resource, *(resource.get("component") or ())):
-        concept = node.get("code") if isinstance(node, dict) else None
-        for coding in (concept.get("coding") if isinstance(concept, dict) else None) or ():
-            if isinstance(coding, dict):
-                found.add(f"{coding.get('system', '')}|{coding.get('code')}")
-    return found
+    concepts = [node.get("code") for node in (resource, *_objects(resource.get("component")))]
+    codings = [one.get("coding") for one in concepts if isinstance(one, dict)]
+    return {f"{one.get('system', '')}|{one.get('code')}" for some in codings for one in _objects(some)}
+
+
+def _objects(node: Any) -> list[dict[str, Any]]:
+    """The objects of a list; none where ``node`` is something else."""
+    return [one for one in node if isinstance(one, dict)] if isinstance(node, list) else []

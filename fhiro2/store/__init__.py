@@ -11,7 +11,7 @@ from contextlib import contextmanager
 from pathlib import Path
 from typing import Any
 
-from sqlalchemy import create_engine, delete, event, insert, select
+from sqlalchemy import Connection, create_engine, delete, event, insert, select, update
 
 from fhiro2.errors import StopError
 from fhiro2.store.migrations import migrate
@@ -34,6 +34,7 @@ class Store:
         self._engine = create_engine(f"sqlite:///{path}")
         event.listen(self._engine, "connect", _prepare)
         event.listen(self._engine, "begin", lambda connection: connection.exec_driver_sql("BEGIN IMMEDIATE"))
+        self._prolong: Callable[[Connection], None] | None = None
         migrate(self._engine)
 
     def close(self) -> None:
@@ -42,9 +43,34 @@ class Store:
 
     @contextmanager
     def transaction(self) -> Iterator[Transaction]:
-        """One transaction: all of it is kept, or nothing."""
+        """One transaction: all of it is kept, or nothing. Under a lease it prolongs it, or raises StopError."""
         with self._engine.begin() as connection:
+            if self._prolong is not None:
+                self._prolong(connection)
             yield Transaction(connection)
+
+    @contextmanager
+    def leased(
+        self, holder: str, now: Callable[[], int], length: int, alive: Callable[[str], bool] = lambda holder: True
+    ) -> Iterator[None]:
+        """Be the one worker meanwhile: each transaction prolongs the lease to ``length`` microseconds from then.
+
+        Raises StopError while another is who may be ``alive``, also in a transaction after another took over a lease
+        that had run out: then nothing of the transaction is kept.
+        """
+
+        def prolong(connection: Connection) -> None:
+            mine = update(LEASE).where(LEASE.c.holder == holder).values(until=now() + length)
+            if not connection.execute(mine).rowcount:
+                raise StopError(f"{self.path}: another worker took this store over; this one ends")
+
+        self.take_lease(holder, now(), now() + length, alive)
+        self._prolong = prolong
+        try:
+            yield
+        finally:
+            self._prolong = None
+            self.give_up_lease(holder)
 
     def take_lease(
         self, holder: str, now: int, until: int, alive: Callable[[str], bool] = lambda holder: True

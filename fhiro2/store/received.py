@@ -14,7 +14,8 @@ from fhiro2.store.tables import COUNTER, CURSOR, REFERENCE, VERSION, chunks
 
 @dataclass(frozen=True)
 class Received:
-    """One version of a resource as it came. ``patient`` is '' where it names no patient by reference.
+    """One version of a resource as it came. ``patient`` is '' where it names no patient by reference, ``key`` where
+    it cannot be read.
 
     ``targets`` are what it points to: references, and ``identifier system|value`` for a Patient's own identifiers and
     for a subject that is named by one.
@@ -107,6 +108,13 @@ class ReceivedVersions:
         asked = select(REFERENCE.c.target).where(REFERENCE.c.source == source, REFERENCE.c.target.not_in(there))
         return sorted(row.target for row in self._connection.execute(asked.distinct()))
 
+    def unknown_identifiers(self, source: str) -> list[str]:
+        """The identifiers (``system|value``) of subjects that no patient of whom there is something has."""
+        of_source = REFERENCE.c.source == source, REFERENCE.c.target.like("identifier %")
+        had = select(REFERENCE.c.target).where(*of_source, REFERENCE.c.key.like("Patient/%"))
+        asked = select(REFERENCE.c.target).where(*of_source, REFERENCE.c.target.not_in(had)).distinct()
+        return sorted(row.target.removeprefix("identifier ") for row in self._connection.execute(asked))
+
     def patients_of(self, source: str, keys: Iterable[str]) -> set[str]:
         """The patients of these resources and of all that refers to them, or shares an identifier with them."""
         found: set[str] = set()
@@ -169,8 +177,13 @@ class ReceivedVersions:
         return [row.key for row in self._connection.execute(asked)]
 
     def pending_contents(self, source: str) -> list[tuple[int, bytes]]:
-        """The versions that have not ended anywhere yet, with their rows, in order."""
-        asked = select(VERSION.c.row, VERSION.c.content).where(VERSION.c.source == source, VERSION.c.bucket == "")
+        """The versions that have not ended yet, and the others of their resources, with their rows, in order."""
+        pending = select(VERSION.c.key).where(VERSION.c.source == source, VERSION.c.bucket == "", VERSION.c.key != "")
+        asked = select(VERSION.c.row, VERSION.c.content).where(
+            VERSION.c.source == source,
+            VERSION.c.content.is_not(None),
+            (VERSION.c.bucket == "") | VERSION.c.key.in_(pending),
+        )
         return [(int(row.row), bytes(row.content)) for row in self._connection.execute(asked.order_by(VERSION.c.row))]
 
     def end(self, ended: Sequence[Ended]) -> None:
@@ -224,3 +237,10 @@ class ReceivedVersions:
         """All patients of whom anything was received."""
         asked = select(VERSION.c.patient).where(VERSION.c.source == source).distinct()
         return {row.patient for row in self._connection.execute(asked)} - {""}
+
+    def new_patients(self, source: str) -> list[str]:
+        """Those of them that have no cursor of their own, which says that their context was asked for."""
+        cursors = select(CURSOR.c.stream).where(CURSOR.c.source == source)
+        asked = select(VERSION.c.patient).where(VERSION.c.source == source, VERSION.c.patient != "")
+        rows = self._connection.execute(asked.where(VERSION.c.patient.not_in(cursors)).distinct())
+        return sorted(row.patient for row in rows)

@@ -68,13 +68,21 @@ class WrittenResources:
             asked = asked.where(OUTBOX.c.patient.in_(list(patients)))
         return [_waiting(row) for row in self._connection.execute(asked)]
 
-    def due(self, most: int, failed: Iterable[str]) -> list[Entry]:
-        """What may be written now, in order: not dead, not ``failed``, and nothing whose target still waits."""
-        waiting = select(OUTBOX.c.reference)
+    def due(self, failed: Iterable[str], most: int) -> list[Entry]:
+        """What may be written now, in order: neither dead nor ``failed``, and nothing whose target is not written."""
         asked = select(OUTBOX).where(
-            OUTBOX.c.state != DEAD, OUTBOX.c.after.not_in(waiting), OUTBOX.c.reference.not_in(list(failed))
+            OUTBOX.c.state != DEAD,
+            OUTBOX.c.reference.not_in(list(failed)),
+            OUTBOX.c.after.not_in(select(OUTBOX.c.reference)),
         )
         return [_waiting(row) for row in self._connection.execute(asked.order_by(OUTBOX.c.sequence).limit(most))]
+
+    def counts(self) -> tuple[int, int]:
+        """How much of the outbox is dead, and how much still waits; what stands behind the dead is neither."""
+        dead = select(OUTBOX.c.reference).where(OUTBOX.c.state == DEAD)
+        waiting = select(func.count()).where(OUTBOX.c.state != DEAD, OUTBOX.c.after.not_in(dead))
+        number = self._connection.execute(select(func.count()).select_from(dead.subquery())).scalar()
+        return int(number or 0), int(self._connection.execute(waiting).scalar() or 0)
 
     def send(self, entries: Sequence[Entry]) -> None:
         """Note that these outbox entries are now sent: until they are confirmed the server may hold their content."""
