@@ -10,6 +10,7 @@ import hashlib
 import json
 from collections.abc import Callable, Iterable, Iterator, Sequence
 from dataclasses import dataclass, field
+from functools import partial
 from typing import Any
 
 import msgspec
@@ -21,7 +22,7 @@ from fhiro2.assess import assess
 from fhiro2.bulk.intake import take_in
 from fhiro2.bulk.quarantine import KeptInMemory
 from fhiro2.codes import code_table
-from fhiro2.errors import Bucket, Reason, RetryError
+from fhiro2.errors import Bucket, Reason, RetryError, StopError
 from fhiro2.fhir.wire import content_hash
 from fhiro2.judge import Pack
 from fhiro2.read import Raw
@@ -34,7 +35,7 @@ from fhiro2.timeline import batches
 from fhiro2.write import Run
 from fhiro2.write.flag import flags
 from fhiro2.write.identity import SOFTWARE_REFERENCE
-from fhiro2.write.provenance import software, withdrawal
+from fhiro2.write.provenance import STANDS_NO_LONGER, TAKEN_BACK, software, withdrawal
 from fhiro2.write.server import Fate, ServerSink
 from fhiro2.write.values import values
 
@@ -112,11 +113,38 @@ class Worker:
                 work.set_cursor(self._name, stream, updated)
         if self._sink is not None:
             self._write(self._sink, done)
+        self._count_waiting(done)
+        return done
+
+    def retract(self) -> Cycle:
+        """Take back all values and flags of ours that the server holds or may hold; the next cycle computes them anew.
+
+        What was never sent is not sent any more. Raises StopError where nothing may be written.
+        """
+        if self._sink is None:
+            raise StopError("the settings do not say `write: true`, without which nothing is taken back; add it")
+        done = Cycle()
+        run = self._run()
+        with self._store.transaction() as work:
+            patients = sorted(work.patients_of_ours())
+        for start in range(0, len(patients), PATIENTS_AT_ONCE):
+            group = set(patients[start : start + PATIENTS_AT_ONCE])
+            with self._store.transaction() as work:
+                done.to_write += _post(work, group, {}, run, TAKEN_BACK)
+                work.compute_again(self._name, group)
+        done.patients = len(patients)
+        self._write(self._sink, done)
+        self._count_waiting(done)
+        return done
+
+    def _run(self) -> Run:
+        return Run(self._recorded(), self._pack.hash, __version__)
+
+    def _count_waiting(self, done: Cycle) -> None:
         with self._store.transaction() as work:
             waiting = work.outbox()
         done.waiting = sum(one.state != DEAD for one in waiting)
         done.dead = len(waiting) - done.waiting
-        return done
 
     # --- read ---
 
@@ -209,7 +237,7 @@ class Worker:
             self._compute_for(set(), rows, done)
 
     def _compute_for(self, group: set[str], rows: Sequence[tuple[int, bytes]], done: Cycle) -> None:
-        run = Run(self._recorded(), self._pack.hash, __version__)
+        run = self._run()
         kept, ends = KeptInMemory(), dict[int, tuple[Bucket, Reason | None]]()
 
         def end(line: int, bucket: Bucket, reason: Reason | None) -> None:
@@ -225,7 +253,7 @@ class Worker:
         with self._store.transaction() as work:
             work.end(_ended(ends, kept))
             if group:
-                done.to_write += _post(work, group, wanted, run)
+                done.to_write += _post(work, group, wanted, run, STANDS_NO_LONGER)
 
     def _rendered(self, outcome: Any, run: Run, group: set[str]) -> dict[str, tuple[Entry, Entry]]:
         """What stands for the patients of ``group``: each resource with its Provenance, by reference."""
@@ -334,12 +362,14 @@ def _provenance(line: str, patient: str, target: str) -> Entry:
     )
 
 
-def _post(work: Transaction, group: set[str], wanted: dict[str, tuple[Entry, Entry]], run: Run) -> int:
-    """Put into the outbox what differs from what the server has, and take out what need not be written any more."""
+def _post(work: Transaction, group: set[str], wanted: dict[str, tuple[Entry, Entry]], run: Run, reason: str) -> int:
+    """Put into the outbox what differs from what the server has, and take out what need not be written any more.
+
+    ``reason`` says why what is not wanted is withdrawn.
+    """
     outbox = work.outbox(group)
-    found = difference(
-        wanted, by_reference(work.ledger(group).values()), by_reference(outbox), lambda one: _withdrawn(one, run)
-    )
+    withdraw = partial(_withdrawn, run=run, reason=reason)
+    found = difference(wanted, by_reference(work.ledger(group).values()), by_reference(outbox), withdraw)
     again = found.drop | {one.reference for one, _ in found.post}
     work.unpost(found.drop | {one.reference for one in outbox if one.after in again})
     device = _device(run)
@@ -358,11 +388,11 @@ def _device(run: Run) -> Entry:
     return Entry(SOFTWARE_REFERENCE, "", hashlib.sha256(content).hexdigest(), content)
 
 
-def _withdrawn(one: Entry, run: Run) -> tuple[Entry, Entry]:
+def _withdrawn(one: Entry, run: Run, reason: str) -> tuple[Entry, Entry]:
     """What was written, as entered in error, with the Provenance that says since when."""
     resource = json.loads(one.content)
     resource["status"] = "entered-in-error"
     content = json.dumps(resource, separators=(",", ":"), ensure_ascii=False).encode()
     digest = hashlib.sha256(content).hexdigest()
     entry = Entry(one.reference, one.patient, digest, content, withdrawal=True)
-    return entry, _provenance(withdrawal(run, one.reference, digest), one.patient, one.reference)
+    return entry, _provenance(withdrawal(run, one.reference, digest, reason), one.patient, one.reference)
