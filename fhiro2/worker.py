@@ -119,7 +119,7 @@ class Worker:
     def retract(self) -> Cycle:
         """Take back all values and flags of ours that the server holds or may hold; the next cycle computes them anew.
 
-        What was never sent is not sent any more. Raises StopError where nothing may be written.
+        Those that were never sent are not sent any more. Raises StopError where nothing may be written.
         """
         if self._sink is None:
             raise StopError("the settings do not say `write: true`, without which nothing is taken back; add it")

@@ -12,8 +12,10 @@ import subprocess
 from collections.abc import Iterator
 from contextlib import contextmanager
 from pathlib import Path
+from typing import Any
 
 import pytest
+import requests
 
 SCRIPT = Path(__file__).parent / "fhir_server.sh"
 SLOWEST = 300  # seconds, with its installation
@@ -22,7 +24,7 @@ SLOWEST = 300  # seconds, with its installation
 @pytest.fixture(scope="session")
 def open_server(tmp_path_factory: pytest.TempPathFactory) -> Iterator[str]:
     """The base URL of a server that lets everybody in."""
-    with _running(tmp_path_factory.mktemp("open-server")) as base_url:
+    with running(tmp_path_factory.mktemp("open-server")) as base_url:
         yield base_url
 
 
@@ -30,7 +32,7 @@ def open_server(tmp_path_factory: pytest.TempPathFactory) -> Iterator[str]:
 def guarded_server(tmp_path_factory: pytest.TempPathFactory) -> Iterator[tuple[str, str]]:
     """The base URL of a server, and the only token that it lets in."""
     token = "let-this-one-in"
-    with _running(tmp_path_factory.mktemp("guarded-server"), FHIR_TOKEN=token) as base_url:
+    with running(tmp_path_factory.mktemp("guarded-server"), FHIR_TOKEN=token) as base_url:
         yield base_url, token
 
 
@@ -41,13 +43,24 @@ def server_python() -> str:
 
 
 @contextmanager
-def _running(folder: Path, **options: str) -> Iterator[str]:
+def running(folder: Path, **options: str) -> Iterator[str]:
+    """The base URL of a server that runs meanwhile, with its files in ``folder``; ``options`` are the script's."""
     environment = {name: value for name, value in os.environ.items() if name not in ("PYTHONPATH", "FHIR_TOKEN")}
-    environment |= {"FHIR_DIR": str(folder), "FHIR_PORT": str(_free_port())} | options
+    environment |= {"FHIR_DIR": str(folder), "FHIR_PORT": str(free_port())} | options
     try:
         yield _call("start", environment).strip().removeprefix("base_url=")
     finally:
         _call("stop", environment)
+
+
+def found(base_url: str, kind: str) -> list[dict[str, Any]]:
+    """All resources of one type, as the server itself tells them."""
+    resources, address = [], f"{base_url}/{kind}?_count=1000&_sort=_lastUpdated"
+    while address:
+        page = requests.get(address, timeout=60).json()
+        resources += [entry["resource"] for entry in page.get("entry", ())]
+        address = next((link["url"] for link in page["link"] if link["relation"] == "next"), "")
+    return resources
 
 
 def _call(word: str, environment: os._Environ[str] | dict[str, str]) -> str:
@@ -57,7 +70,8 @@ def _call(word: str, environment: os._Environ[str] | dict[str, str]) -> str:
     return done.stdout
 
 
-def _free_port() -> int:
+def free_port() -> int:
+    """A port of this machine that nothing listens on."""
     with socket.socket() as probe:
         probe.bind(("127.0.0.1", 0))
         port: int = probe.getsockname()[1]
