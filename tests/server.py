@@ -7,18 +7,12 @@ an empty store. What cannot be installed or started fails the tests that need it
 from __future__ import annotations
 
 import os
-import socket
-import subprocess
 from collections.abc import Iterator
-from contextlib import contextmanager
 from pathlib import Path
-from typing import Any
 
 import pytest
-import requests
 
-SCRIPT = Path(__file__).parent / "fhir_server.sh"
-SLOWEST = 300  # seconds, with its installation
+from tests.fhir_server import call, running
 
 
 @pytest.fixture(scope="session")
@@ -39,40 +33,4 @@ def guarded_server(tmp_path_factory: pytest.TempPathFactory) -> Iterator[tuple[s
 @pytest.fixture(scope="session")
 def server_python() -> str:
     """The Python of the server's environment, which has libraries that this project does not ask for."""
-    return str(Path(_call("install", os.environ).strip(), "bin", "python"))
-
-
-@contextmanager
-def running(folder: Path, **options: str) -> Iterator[str]:
-    """The base URL of a server that runs meanwhile, with its files in ``folder``; ``options`` are the script's."""
-    environment = {name: value for name, value in os.environ.items() if name not in ("PYTHONPATH", "FHIR_TOKEN")}
-    environment |= {"FHIR_DIR": str(folder), "FHIR_PORT": str(free_port())} | options
-    try:
-        yield _call("start", environment).strip().removeprefix("base_url=")
-    finally:
-        _call("stop", environment)
-
-
-def found(base_url: str, kind: str) -> list[dict[str, Any]]:
-    """All resources of one type, as the server itself tells them."""
-    resources, address = [], f"{base_url}/{kind}?_count=1000&_sort=_lastUpdated"
-    while address:
-        page = requests.get(address, timeout=60).json()
-        resources += [entry["resource"] for entry in page.get("entry", ())]
-        address = next((link["url"] for link in page["link"] if link["relation"] == "next"), "")
-    return resources
-
-
-def _call(word: str, environment: os._Environ[str] | dict[str, str]) -> str:
-    done = subprocess.run([SCRIPT, word], env=environment, capture_output=True, text=True, timeout=SLOWEST)
-    if done.returncode:
-        pytest.fail(f"the FHIR test server (tests/fhir_server.sh {word}) failed:\n{done.stderr[-2000:]}")
-    return done.stdout
-
-
-def free_port() -> int:
-    """A port of this machine that nothing listens on."""
-    with socket.socket() as probe:
-        probe.bind(("127.0.0.1", 0))
-        port: int = probe.getsockname()[1]
-        return port
+    return str(Path(call("install", os.environ).strip(), "bin", "python"))

@@ -20,7 +20,7 @@ import pytest
 import requests
 
 from fhiro2.fhir import systems
-from tests.server import SCRIPT, found, free_port, running
+from tests.fhir_server import SCRIPT, found, free_port, running
 
 ROOT = Path(__file__).parent.parent
 SECTION = (ROOT / "README.md").read_text(encoding="utf-8").split("\n## Beside a FHIR server\n")[1].split("\n## ")[0]
@@ -148,6 +148,22 @@ def test_the_example_does_what_the_page_says(newcomer: Newcomer) -> None:
     newcomer.does(stop)
     with pytest.raises(requests.ConnectionError):
         requests.get(f"{newcomer.base_url}/metadata", timeout=5)
+
+
+@pytest.mark.parametrize(
+    ("words", "code", "says"),
+    [
+        (["load"], 2, "usage:"),
+        (["load", "fixtures/ward"], 1, "no server runs in"),
+        (["begin"], 2, "install|start|load FOLDER|stop"),
+    ],
+)
+def test_what_the_server_s_script_cannot_do_is_said(tmp_path: Path, words: list[str], code: int, says: str) -> None:
+    done = subprocess.run(
+        [SCRIPT, *words], cwd=ROOT, env=os.environ | {"FHIR_DIR": str(tmp_path)}, capture_output=True, text=True
+    )
+    assert done.returncode == code
+    assert says in done.stderr
 
 
 # --- interrupted -------------------------------------------------------------------------------------------------

@@ -20,7 +20,7 @@ from fhiro2.store.entry import DEAD, Entry
 from fhiro2.worker import Cycle
 from fhiro2.write.provenance import TAKEN_BACK
 from fhiro2.write.server import Delivered, ServerSink
-from tests.server import found, running
+from tests.fhir_server import found, running
 from tests.test_way import observation
 
 
