@@ -8,9 +8,10 @@ depth. Only JSON-like numbers, ``true``, ``false`` and ``null`` are read as such
 from __future__ import annotations
 
 import re
-from collections.abc import Iterator
+from collections.abc import Iterator, Mapping
 from math import isfinite
 from pathlib import Path
+from types import MappingProxyType
 from typing import Any, TypeVar
 
 import yaml
@@ -20,6 +21,7 @@ from fhiro2.errors import StopError
 
 MOST_BYTES = 200_000
 MOST_DEPTH = 30
+NO_HINTS: Mapping[str, str] = MappingProxyType({})
 
 Model = TypeVar("Model", bound=BaseModel)
 Step = str | int
@@ -30,24 +32,27 @@ _DECIMAL = re.compile(r"-?(0|[1-9][0-9]*)(\.[0-9]+)?([eE][-+]?[0-9]+)?")
 _WORDS = {"true": True, "false": False, "null": None, "~": None}
 
 
-def read_model(path: Path, model: type[Model]) -> Model:
-    """The document in ``path`` as ``model``; raises StopError with one line ``file:line:column`` a mistake."""
+def read_model(path: Path, model: type[Model], hints: Mapping[str, str] = NO_HINTS) -> Model:
+    """The document in ``path`` as ``model``; raises StopError with one line ``file:line:column`` a mistake.
+
+    ``hints`` say of keys that do not exist, by name, what to do instead.
+    """
     try:
         content = path.read_bytes()
     except OSError as error:
         raise StopError(f"{path}: cannot be read ({error.strerror}); check the path and its rights") from None
     value, marks = parse(content, str(path))
-    return validated(value, marks, str(path), model)
+    return validated(value, marks, str(path), model, hints)
 
 
-def validated(value: Any, marks: Marks, name: str, model: type[Model]) -> Model:
+def validated(value: Any, marks: Marks, name: str, model: type[Model], hints: Mapping[str, str] = NO_HINTS) -> Model:
     """``value`` as ``model``; raises StopError naming the place of every mistake."""
     try:
         return model.model_validate(value)
     except ValidationError as error:
         lines = [
             f"{name}:{line}:{column}: {'.'.join(map(str, place)) or 'document'}: {message}"
-            for place, message in _problems(error)
+            for place, message in _problems(error, hints)
             for line, column in [_nearest(place, marks)]
         ]
         raise StopError("\n".join(lines)) from None
@@ -144,9 +149,11 @@ def _scalar(text: str, *, plain: bool) -> Any:
     return text
 
 
-def _problems(error: ValidationError) -> Iterator[tuple[tuple[Step, ...], str]]:
+def _problems(error: ValidationError, hints: Mapping[str, str]) -> Iterator[tuple[tuple[Step, ...], str]]:
     for problem in error.errors(include_url=False, include_context=False):
-        yield tuple(problem["loc"]), problem["msg"]
+        hint = hints.get(str(problem["loc"][-1])) if problem["type"] == "extra_forbidden" else None
+        message = problem["msg"].removeprefix("Value error, ")
+        yield tuple(problem["loc"]), f"{message}; {hint}" if hint else message
 
 
 def _nearest(place: tuple[Step, ...], marks: Marks) -> tuple[int, int]:

@@ -42,6 +42,19 @@ def store_at(path: Path) -> Iterator[Store]:
 
 def run_once(settings: Settings, mapping: Mapping, pack: Pack) -> Cycle:
     """One cycle; raises StopError where the settings do not allow one."""
+    with _at_work(settings, mapping, pack) as worker:
+        return worker.cycle()
+
+
+def retract(settings: Settings, mapping: Mapping, pack: Pack) -> Cycle:
+    """Take back everything of ours that the server holds; raises StopError where the settings do not allow it."""
+    with _at_work(settings, mapping, pack) as worker:
+        return worker.retract()
+
+
+@contextmanager
+def _at_work(settings: Settings, mapping: Mapping, pack: Pack) -> Iterator[Worker]:
+    """The only worker of the store, until it is let go; raises StopError where the settings do not allow one."""
     server = _checked(settings)
     client = Client(
         server.url,
@@ -56,7 +69,7 @@ def run_once(settings: Settings, mapping: Mapping, pack: Pack) -> Cycle:
     try:
         with store.leased(holder, _now, LEASE_SECONDS * 1_000_000, may_be_alive):
             sink = ServerSink(client) if settings.write else None
-            return Worker(source, sink, store, settings, mapping, pack, server.name, _now, _recorded).cycle()
+            yield Worker(source, sink, store, settings, mapping, pack, server.name, _now, _recorded)
     finally:
         store.close()
 

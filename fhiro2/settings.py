@@ -2,14 +2,16 @@
 
 from __future__ import annotations
 
-from datetime import date
+from datetime import date, datetime
 from pathlib import Path
-from typing import Literal
+from typing import Annotated, Literal
 from zoneinfo import ZoneInfo, ZoneInfoNotFoundError
 
-from pydantic import BaseModel, ConfigDict, Field, field_validator
+from pydantic import BaseModel, BeforeValidator, ConfigDict, Field, field_validator
 
 from fhiro2.documents import read_model
+from fhiro2.errors import StopError
+from fhiro2.fhir import links
 
 ContextFact = Literal[
     "ecmo",
@@ -22,6 +24,17 @@ ContextFact = Literal[
     "smoke-or-nitroprusside-exposure",
 ]
 SpecimenName = Literal["arterial", "mixed_venous", "central_venous", "venous", "capillary", "cord"]
+
+
+def _path(given: object) -> object:
+    if given is None or isinstance(given, Path):
+        return given
+    if not isinstance(given, str):
+        raise ValueError("not the path of a file; write it as text")
+    return Path(given)
+
+
+File = Annotated[Path, BeforeValidator(_path)]
 
 
 class _Frozen(BaseModel):
@@ -50,21 +63,41 @@ class Windows(_Frozen):
 
 
 class Server(_Frozen):
-    """A FHIR R4 server and how to speak with it. The token comes from a file or from FHIRO2_TOKEN, never from here."""
+    """A FHIR R4 server and how to speak with it."""
 
     name: str = Field("server", pattern=r"^[a-z0-9-]{1,40}$", description="names the source in ids; never change it")
-    url: str = Field(description="base address, http only for loopback")
-    token_file: Path | None = Field(None, description="file that holds a static bearer token and nothing else")
-    ca_file: Path | None = Field(None, description="certificates of a private authority (PEM)")
+    url: str = Field(description="base address; plain http to this machine only")
+    token_file: File | None = Field(None, description="file that holds a static bearer token and nothing else")
+    ca_file: File | None = Field(None, description="certificates of a private authority (PEM)")
     page_size: int = Field(200, ge=1, le=1000, description="entries asked for in one page")
     overlap_minutes: float = Field(5.0, ge=0, description="how far each cycle reads back before the last one")
     since: str | None = Field(None, description="instant from which the first cycle reads; all without it")
     timeout_seconds: float = Field(30.0, gt=0, description="longest wait for one answer")
 
-    @field_validator("token_file", "ca_file", mode="before")
+    @field_validator("url")
     @classmethod
-    def _path(cls, given: object) -> object:
-        return Path(given) if isinstance(given, str) else given
+    def _safe(cls, url: str) -> str:
+        try:
+            base = links.checked_base(url)
+        except StopError as error:
+            raise ValueError(str(error)) from None
+        home = links.origin(base)
+        if home[0] != "https" and not links.on_this_machine(home):
+            raise ValueError("the server's base URL is plain http to another machine; use https")
+        return base
+
+    @field_validator("since")
+    @classmethod
+    def _instant(cls, since: str | None) -> str | None:
+        if since is None:
+            return None
+        try:
+            offset = datetime.fromisoformat(since).tzinfo
+        except ValueError:
+            offset = None
+        if offset is None:
+            raise ValueError("not an instant with its offset from UTC, such as 2026-03-01T06:00:00Z")
+        return since
 
 
 class Settings(_Frozen):
@@ -77,7 +110,7 @@ class Settings(_Frozen):
         None, ge=-430, le=5500, description="altitude of the ward, where its usual pressure is not known"
     )
     server: Server | None = Field(None, description="the FHIR server of `fhiro2 run`")
-    store: Path = Field(Path("fhiro2.sqlite"), description="file in which `fhiro2 run` keeps what it knows")
+    store: File = Field(Path("fhiro2.sqlite"), description="file in which `fhiro2 run` keeps what it knows")
     write_together: int = Field(1, ge=1, le=200, description="resources in one request (a batch); 1 for one by one")
     write: bool = Field(False, description="write to the server; without it a cycle says what it would write")
     base_urls: tuple[str, ...] = Field((), description="server addresses whose absolute references are our own")
@@ -90,11 +123,6 @@ class Settings(_Frozen):
     @classmethod
     def _zone_exists(cls, zone: str | None) -> str | None:
         return _checked_zone(zone)
-
-    @field_validator("store", mode="before")
-    @classmethod
-    def _path(cls, given: object) -> object:
-        return Path(given) if isinstance(given, str) else given
 
     @property
     def usual_pressure_kpa(self) -> float | None:
@@ -169,12 +197,13 @@ class Mapping(_Frozen):
         return _checked_zone(zone)
 
 
+HINTS = {"token": "a token is kept in the file that server.token_file names, or in FHIRO2_TOKEN, never in settings"}
 NO_MAPPING = Mapping(mapping="none", version=0, owner="nobody", signed="never")
 
 
 def read_settings(path: Path) -> Settings:
     """The settings in a YAML file; raises StopError with file, line and key."""
-    return read_model(path, Settings)
+    return read_model(path, Settings, HINTS)
 
 
 def read_mapping(path: Path) -> Mapping:

@@ -59,6 +59,8 @@ def show_account(console: Console, account: dict[str, Any]) -> None:
         table.add_row(f"{sign} {account[bucket.value]}", bucket.value.replace("_", " "), _MEANING[bucket])
         for reason, number in sorted(account["reasons"][bucket.value].items(), key=lambda row: (-row[1], row[0])):
             table.add_row("", Text(f"  {number} {reason}", style="dim"), "")
+    if account.get("pending"):
+        table.add_row(f"+ {account['pending']}", "pending", "to be computed in the next cycle")
     if account["parts_quarantined"]:
         table.add_row(str(account["parts_quarantined"]), "components", "refused inside resources that were used")
     console.print(table)
@@ -207,12 +209,28 @@ def show_cycle(console: Console, done: Cycle, *, writing: bool) -> None:
         console.print(line, highlight=False, markup=False)
 
 
+def show_retraction(console: Console, done: Cycle) -> None:
+    """What was taken back, what was not, and what the next run does."""
+    lines = [f"{done.withdrawn} values and flags of ours are now entered in error at the server."]
+    if done.dead or done.waiting:
+        lines.append(f"{done.dead} writes were refused, {done.waiting} still wait; `fhiro2 written list` names them.")
+    lines += [f"Notice: {notice}." for notice in done.notices]
+    lines.append(
+        "The next `fhiro2 run` computes these patients again and, with `write: true`, writes anew what then stands."
+    )
+    for line in lines:
+        console.print(line, highlight=False, markup=False)
+
+
 def show_written(console: Console, written: Sequence[Entry], waiting: Sequence[Entry]) -> None:
-    """The ledger and the outbox, one resource a line."""
+    """The ledger and the outbox, one resource a line, and how many there are of each state and type."""
     table = plain_table("state", "resource", "patient", "what is wrong")
     for one in (*written, *waiting):
         table.add_row(*map(Text, (one.state, one.reference, one.patient, one.problem)))
     console.print(table)
+    counts = Counter((one.state, one.reference.partition("/")[0]) for one in (*written, *waiting))
+    for (state, kind), number in sorted(counts.items()):
+        console.print(f"{number} {kind} {state}", highlight=False)
 
 
 def _short(system: str) -> str:

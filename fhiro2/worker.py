@@ -21,7 +21,7 @@ from fhiro2.bulk.posting import Wanted, post, rendered
 from fhiro2.bulk.quarantine import KeptInMemory
 from fhiro2.bulk.stored import Stored, ended
 from fhiro2.codes import code_table
-from fhiro2.errors import Bucket, Reason
+from fhiro2.errors import Bucket, Reason, StopError
 from fhiro2.fhir.wire import content_hash
 from fhiro2.judge import Pack
 from fhiro2.model import MICROSECONDS
@@ -30,6 +30,7 @@ from fhiro2.settings import Mapping, Settings
 from fhiro2.store import Received, Store, Transaction
 from fhiro2.timeline import batches
 from fhiro2.write import Run
+from fhiro2.write.provenance import STANDS_NO_LONGER, TAKEN_BACK
 from fhiro2.write.server import ServerSink
 
 PATIENTS_AT_ONCE = 50
@@ -107,9 +108,36 @@ class Worker:
                 work.set_cursor(self._name, stream, updated)
         if self._sink is not None:
             self._deliver(self._sink, done)
+        self._count_waiting(done)
+        return done
+
+    def retract(self) -> Cycle:
+        """Take back all values and flags of ours that the server holds or may hold; the next cycle computes them anew.
+
+        Those that were never sent are not sent any more. Raises StopError where nothing may be written.
+        """
+        if self._sink is None:
+            raise StopError("the settings do not say `write: true`, without which nothing is taken back; add it")
+        done = Cycle()
+        run = self._run()
+        with self._store.transaction() as work:
+            patients = sorted(work.patients_of_ours())
+        for start in range(0, len(patients), PATIENTS_AT_ONCE):
+            group = set(patients[start : start + PATIENTS_AT_ONCE])
+            with self._store.transaction() as work:
+                done.to_write += post(work, group, {}, set(), run, TAKEN_BACK)
+                work.compute_again(self._name, group)
+        done.patients = len(patients)
+        self._deliver(self._sink, done)
+        self._count_waiting(done)
+        return done
+
+    def _run(self) -> Run:
+        return Run(self._recorded(), self._pack.hash, __version__)
+
+    def _count_waiting(self, done: Cycle) -> None:
         with self._store.transaction() as work:
             done.dead, done.waiting = work.counts()
-        return done
 
     def _deliver(self, sink: ServerSink, done: Cycle) -> None:
         found = deliver(self._store, sink, self._settings.write_together, self._now)
@@ -245,7 +273,7 @@ class Worker:
         return hashlib.sha256("\n".join(parts).encode()).hexdigest()
 
     def _compute_for(self, group: set[str], rows: Sequence[tuple[int, bytes]], done: Cycle) -> None:
-        run = Run(self._recorded(), self._pack.hash, __version__)
+        run = self._run()
         kept, ends = KeptInMemory(), dict[int, tuple[Bucket, Reason | None]]()
 
         def end(line: int, bucket: Bucket, reason: Reason | None) -> None:
@@ -264,4 +292,4 @@ class Worker:
         with self._store.transaction() as work:
             work.end(ended(ends, kept.refusals))
             if group:
-                done.to_write += post(work, group, wanted, held, run)
+                done.to_write += post(work, group, wanted, held, run, STANDS_NO_LONGER)

@@ -5,6 +5,7 @@
 #
 #   fhir_server.sh install    make its environment where missing, print its folder
 #   fhir_server.sh start      install where missing, start, wait until it answers, print base_url=...
+#   fhir_server.sh load DIR   put the resources of the *.ndjson files in DIR into the started server, context first
 #   fhir_server.sh stop       end the server that was started with the same FHIR_DIR
 #
 # Settings (environment):
@@ -89,9 +90,21 @@ start() {
   exit 1
 }
 
+load() {
+  running || { echo "no server runs in $DIR; start one first" >&2; exit 1; }
+  [ -d "$1" ] || { echo "no such folder: $1" >&2; exit 2; }
+  "$VENV/bin/python" "$(dirname "$0")/fhir_load.py" "$BASE" "$1"
+}
+
+usage() {
+  echo "usage: $0 install|start|load FOLDER|stop" >&2
+  exit 2
+}
+
 case "${1:-}" in
 install) install && echo "$VENV" ;;
 start) install; start ;;
+load) [ $# -eq 2 ] || usage; load "$2" ;;
 stop) stop ;;
-*) echo "usage: $0 install|start|stop" >&2; exit 2 ;;
+*) usage ;;
 esac

@@ -7,22 +7,18 @@ an empty store. What cannot be installed or started fails the tests that need it
 from __future__ import annotations
 
 import os
-import socket
-import subprocess
 from collections.abc import Iterator
-from contextlib import contextmanager
 from pathlib import Path
 
 import pytest
 
-SCRIPT = Path(__file__).parent / "fhir_server.sh"
-SLOWEST = 300  # seconds, with its installation
+from tests.fhir_server import call, running
 
 
 @pytest.fixture(scope="session")
 def open_server(tmp_path_factory: pytest.TempPathFactory) -> Iterator[str]:
     """The base URL of a server that lets everybody in."""
-    with a_server(tmp_path_factory.mktemp("open-server")) as base_url:
+    with running(tmp_path_factory.mktemp("open-server")) as base_url:
         yield base_url
 
 
@@ -30,36 +26,11 @@ def open_server(tmp_path_factory: pytest.TempPathFactory) -> Iterator[str]:
 def guarded_server(tmp_path_factory: pytest.TempPathFactory) -> Iterator[tuple[str, str]]:
     """The base URL of a server, and the only token that it lets in."""
     token = "let-this-one-in"
-    with a_server(tmp_path_factory.mktemp("guarded-server"), FHIR_TOKEN=token) as base_url:
+    with running(tmp_path_factory.mktemp("guarded-server"), FHIR_TOKEN=token) as base_url:
         yield base_url, token
 
 
 @pytest.fixture(scope="session")
 def server_python() -> str:
     """The Python of the server's environment, which has libraries that this project does not ask for."""
-    return str(Path(_call("install", os.environ).strip(), "bin", "python"))
-
-
-@contextmanager
-def a_server(folder: Path, **options: str) -> Iterator[str]:
-    """The base URL of a server of its own, with an empty store in ``folder``, stopped in the end."""
-    environment = {name: value for name, value in os.environ.items() if name not in ("PYTHONPATH", "FHIR_TOKEN")}
-    environment |= {"FHIR_DIR": str(folder), "FHIR_PORT": str(_free_port())} | options
-    try:
-        yield _call("start", environment).strip().removeprefix("base_url=")
-    finally:
-        _call("stop", environment)
-
-
-def _call(word: str, environment: os._Environ[str] | dict[str, str]) -> str:
-    done = subprocess.run([SCRIPT, word], env=environment, capture_output=True, text=True, timeout=SLOWEST)
-    if done.returncode:
-        pytest.fail(f"the FHIR test server (tests/fhir_server.sh {word}) failed:\n{done.stderr[-2000:]}")
-    return done.stdout
-
-
-def _free_port() -> int:
-    with socket.socket() as probe:
-        probe.bind(("127.0.0.1", 0))
-        port: int = probe.getsockname()[1]
-        return port
+    return str(Path(call("install", os.environ).strip(), "bin", "python"))

@@ -14,7 +14,7 @@ from fhiro2.derive import codes_of
 from fhiro2.derive.constants import ORDINARY_CARDIAC_INDEX, ORDINARY_CONSUMPTION_INDEX
 from fhiro2.errors import Reason
 from fhiro2.model import CAUTION_TEXT, WHY_TEXT, Caution, Why
-from fhiro2.settings import Mapping, Settings, Windows
+from fhiro2.settings import Mapping, Server, Settings, Windows
 from tests.test_way import ward_timelines
 
 ROOT = Path(__file__).parent.parent
@@ -32,7 +32,7 @@ def commands() -> set[str]:
 
 
 def test_every_command_is_in_the_readme_and_every_command_there_exists() -> None:
-    told = set(re.findall(r"fhiro2 ((?:rules |quarantine )?[a-z]+)(?= |\n|`)", README))
+    told = set(re.findall(r"fhiro2 ((?:rules |quarantine |written )?[a-z]+)(?= |\n|`)", README))
     assert commands() <= told
     assert {word for word in told if word.split()[0] in {name.split()[0] for name in commands()}} == commands()
 
@@ -115,8 +115,8 @@ def test_inputs_and_bases_are_sound() -> None:
     assert len({row.name for row in INPUTS}) == len(INPUTS)
 
 
-@pytest.mark.parametrize("model", [Settings, Windows])
-def test_every_setting_says_what_it_is(model: type[Settings | Windows]) -> None:
+@pytest.mark.parametrize("model", [Settings, Server, Windows])
+def test_every_setting_says_what_it_is(model: type[Settings | Server | Windows]) -> None:
     for name, field in model.model_fields.items():
         assert name == "windows" or field.description, name
 

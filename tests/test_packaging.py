@@ -1,8 +1,11 @@
 """The wheel, built from the sdist, carries rules, codes and ward, and works with no checkout beside it."""
 
 import os
+import re
 import subprocess
 import sys
+import tomllib
+from importlib.metadata import packages_distributions
 from pathlib import Path
 
 import pytest
@@ -39,6 +42,32 @@ def test_the_wheel_works_from_an_empty_folder(installed: Path, tmp_path: Path) -
     assert "Low arterial oxygen" in told
     assert "all cases passed" in run("-m", "fhiro2", "rules", "check", cwd=tmp_path, path=installed)
     assert list(tmp_path.iterdir()) == []
+
+
+def test_the_wheel_holds_every_module_and_its_commands(installed: Path, tmp_path: Path) -> None:
+    modules = {file.relative_to(CHECKOUT) for file in (CHECKOUT / "fhiro2").rglob("*.py")}
+    assert modules == {
+        file.relative_to(installed)
+        for file in (installed / "fhiro2").rglob("*.py")
+        if "packaged_data" not in file.parts
+    }
+    for words in (["run"], ["account"], ["quarantine", "retry"], ["written", "list"], ["written", "retract"]):
+        assert f"Usage: python -m fhiro2 {' '.join(words)} " in run(
+            "-m", "fhiro2", *words, "--help", cwd=tmp_path, path=installed
+        )
+
+
+def test_everything_that_is_imported_is_required() -> None:
+    """By the metadata of the installed distributions: which of them gives each module that the program imports."""
+    text = "\n".join(file.read_text(encoding="utf-8") for file in (CHECKOUT / "fhiro2").rglob("*.py"))
+    imported = set(re.findall(r"^\s*(?:from|import) (\w+)", text, re.MULTILINE)) - sys.stdlib_module_names
+    given = packages_distributions()
+    project = tomllib.loads((CHECKOUT / "pyproject.toml").read_text(encoding="utf-8"))["project"]
+    required = {re.split("[^A-Za-z0-9._-]", one)[0].lower() for one in project["dependencies"]}
+    needed = {name for name in imported - {"fhiro2", "durable"} if name in given}
+    assert len(needed) > 8
+    for name in needed:
+        assert {one.lower() for one in given[name]} & required, name
 
 
 def test_the_shipped_data_is_the_checkout_s(installed: Path) -> None:

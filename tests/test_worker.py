@@ -28,7 +28,7 @@ from fhiro2.store.entry import STANDING, WITHDRAWN, Entry
 from fhiro2.worker import Cycle
 from fhiro2.write.server import holds
 from tests.feeds import Resource, observation, patient, specimen
-from tests.server import a_server
+from tests.fhir_server import running
 from tests.validators import JUDGES
 
 WARD = Path(__file__).parent.parent / "fixtures" / "ward"
@@ -119,7 +119,7 @@ class Site:
 
 @pytest.fixture
 def site(tmp_path: Path) -> Iterator[Site]:
-    with a_server(tmp_path / "server") as base:
+    with running(tmp_path / "server") as base:
         yield Site(base, tmp_path / "store.sqlite")
 
 
@@ -268,7 +268,7 @@ def test_a_late_specimen_makes_unknown_blood_arterial(site: Site) -> None:
 
 
 def test_with_a_token_and_without(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
-    with a_server(tmp_path / "server", FHIR_TOKEN="let-in") as base:
+    with running(tmp_path / "server", FHIR_TOKEN="let-in") as base:
         site = Site(base, tmp_path / "store.sqlite", "let-in")
         site.put(*ward((2,), 60))
         secret = tmp_path / "token"
@@ -335,14 +335,14 @@ def test_killed_anywhere_the_next_cycle_ends_the_same_and_writes_nothing_twice(
     tmp_path: Path, request: pytest.FixtureRequest
 ) -> None:
     inputs = ward((2,), 100)
-    with a_server(tmp_path / "whole") as base:
+    with running(tmp_path / "whole") as base:
         whole = Site(base, tmp_path / "whole.sqlite")
         whole.put(*inputs)
         length = cycle_in_a_process(whole, 60.0)
         assert set(whole.versions().values()) == {"1"}
     chance, inside = random.Random(1), 0
     for number in range(KILLS if request.config.getoption("--full") else KILLS_IN_CI):
-        with a_server(tmp_path / f"server-{number}") as base:
+        with running(tmp_path / f"server-{number}") as base:
             site = Site(base, tmp_path / f"{number}.sqlite")
             site.put(*inputs)
             inside += cycle_in_a_process(site, chance.uniform(0, length)) < 0

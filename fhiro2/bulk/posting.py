@@ -32,10 +32,11 @@ def rendered(outcome: Outcome, run: Run, group: set[str]) -> Wanted:
     return found | _entries("Flag", flags(outcome, run, hashes), group)
 
 
-def post(work: Transaction, group: set[str], wanted: Wanted, held: set[str], run: Run) -> int:
+def post(work: Transaction, group: set[str], wanted: Wanted, held: set[str], run: Run, reason: str) -> int:
     """Put into the outbox what differs from what the server has, and take out what need not be written any more.
 
-    The flags of patients who are ``held`` stay as they are: nothing is known of what should stand.
+    The flags of patients who are ``held`` stay as they are: nothing is known of what should stand. ``reason`` says why
+    what is not wanted is withdrawn.
     """
 
     def left_alone(one: Entry) -> bool:
@@ -43,7 +44,7 @@ def post(work: Transaction, group: set[str], wanted: Wanted, held: set[str], run
 
     outbox = [one for one in work.outbox(group) if not left_alone(one)]
     ledger = [one for one in work.ledger(group).values() if not left_alone(one)]
-    found = difference(wanted, by_reference(ledger), by_reference(outbox), lambda one: withdrawn(one, run))
+    found = difference(wanted, by_reference(ledger), by_reference(outbox), lambda one: _withdrawn(one, run, reason))
     again = found.drop | {one.reference for one, _ in found.post}
     work.unpost(found.drop | {one.reference for one in outbox if one.after in again})
     device = _device(run)
@@ -54,14 +55,14 @@ def post(work: Transaction, group: set[str], wanted: Wanted, held: set[str], run
     return len(found.post)
 
 
-def withdrawn(one: Entry, run: Run) -> tuple[Entry, Entry]:
+def _withdrawn(one: Entry, run: Run, reason: str) -> tuple[Entry, Entry]:
     """What was written, as entered in error, with the Provenance that says since when."""
     resource = json.loads(one.content)
     resource["status"] = "entered-in-error"
     content = json.dumps(resource, separators=(",", ":"), ensure_ascii=False).encode()
     digest = hashlib.sha256(content).hexdigest()
     entry = Entry(one.reference, one.patient, digest, content, withdrawal=True)
-    return entry, _provenance(withdrawal(run, one.reference, digest), one.patient, one.reference)
+    return entry, _provenance(withdrawal(run, one.reference, digest, reason), one.patient, one.reference)
 
 
 class _Subject(msgspec.Struct):

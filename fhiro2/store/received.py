@@ -11,6 +11,8 @@ from sqlalchemy.dialects.sqlite import insert as upsert
 
 from fhiro2.store.tables import COUNTER, CURSOR, REFERENCE, VERSION, chunks
 
+_NOT_ENDED = {"bucket": "", "reason": "", "detail": "", "refused_parts": ""}
+
 
 @dataclass(frozen=True)
 class Received:
@@ -68,10 +70,7 @@ class ReceivedVersions:
             "hash": received.hash,
             "patient": received.patient,
             "content": received.content,
-            "bucket": "",
-            "reason": "",
-            "detail": "",
-            "refused_parts": "",
+            **_NOT_ENDED,
         }
         if not self._connection.execute(upsert(VERSION).values(values).on_conflict_do_nothing()).rowcount:
             self.count("repeated")
@@ -230,8 +229,13 @@ class ReceivedVersions:
     def try_again(self) -> int:
         """Let everything that is quarantined, whole or in a component, count as not ended; returns how many."""
         refused = (VERSION.c.bucket == "quarantined") | (VERSION.c.refused_parts != "")
-        values = {"bucket": "", "reason": "", "detail": "", "refused_parts": ""}
-        return self._connection.execute(update(VERSION).where(refused).values(values)).rowcount
+        return self._connection.execute(update(VERSION).where(refused).values(_NOT_ENDED)).rowcount
+
+    def compute_again(self, source: str, patients: Iterable[str]) -> None:
+        """Let everything that is kept of these patients count as not ended."""
+        for some in chunks(patients):
+            theirs = (VERSION.c.source == source) & VERSION.c.patient.in_(some) & VERSION.c.content.is_not(None)
+            self._connection.execute(update(VERSION).where(theirs).values(_NOT_ENDED))
 
     def patients(self, source: str) -> set[str]:
         """All patients of whom anything was received."""

@@ -37,6 +37,11 @@ class WrittenResources:
             for row in self._connection.execute(select(WRITTEN).where(WRITTEN.c.reference.in_(some)))
         ]
 
+    def patients_of_ours(self) -> set[str]:
+        """All patients of whom anything was written or is to be written."""
+        asked = select(WRITTEN.c.patient).union(select(OUTBOX.c.patient))
+        return {row.patient for row in self._connection.execute(asked)} - {""}
+
     def post(self, entries: Iterable[Entry]) -> None:
         """Put into the outbox; what was there for the same reference and is not in flight is replaced."""
         for one in entries:

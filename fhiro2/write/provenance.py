@@ -16,6 +16,10 @@ _ASSEMBLER = {"system": systems.PARTICIPANT_TYPE, "code": "assembler", "display"
 _AGENT = {"type": {"coding": [_ASSEMBLER]}, "who": {"reference": SOFTWARE_REFERENCE, "identifier": _IDENTIFIER}}
 
 
+STANDS_NO_LONGER = "stands no longer by what is known now"
+TAKEN_BACK = "all that this software wrote was taken back"
+
+
 class References(dict[int, str]):
     """The reference to the Observation behind each origin, versioned where a version is known, fit for a slot."""
 
@@ -102,8 +106,8 @@ def provenance_shape(run: Run, kind: str, policy: str) -> Shape:
     return shape("Provenance", content, [text_slot("id"), text_slot("target"), time_slot(1), sources])
 
 
-def withdrawal(run: Run, target: str, content_hash: str) -> str:
-    """The Provenance, as one line, of taking ``target`` back as entered in error."""
+def withdrawal(run: Run, target: str, content_hash: str, reason: str) -> str:
+    """The Provenance, as one line, of taking ``target`` back as entered in error, and why."""
     nullified = {"system": systems.DATA_OPERATION, "code": "NULLIFY", "display": "nullify"}
     return dumped(
         "Provenance",
@@ -113,7 +117,7 @@ def withdrawal(run: Run, target: str, content_hash: str) -> str:
             "target": [{"reference": target}],
             "recorded": run.recorded,
             "policy": [f"urn:sha256:{run.pack_hash}"],
-            "reason": [{"text": "stands no longer by what is known now"}],
+            "reason": [{"text": reason}],
             "activity": {"coding": [nullified]},
             "agent": [_AGENT],
         },
