@@ -17,7 +17,7 @@ from typing import Any
 import pytest
 import requests
 
-from fhiro2.judge import read_pack
+from fhiro2.judge import Pack, read_pack
 from fhiro2.live import run_once
 from fhiro2.packaged import rules_folder
 from fhiro2.read.ndjson import NdjsonSource
@@ -277,6 +277,23 @@ def test_with_a_token_and_without(tmp_path: Path, monkeypatch: pytest.MonkeyPatc
         assert site.cycle(server={"token_file": secret}).written > 0
         monkeypatch.setenv("FHIRO2_TOKEN", "let-in")
         assert site.cycle().written == 0
+
+
+def test_where_the_rules_changed_all_patients_are_computed_again(site: Site) -> None:
+    inputs = ward((5,))
+    site.put(*inputs)
+    site.cycle()
+    raised = {one["code"]["coding"][0]["code"] for one in flags(site)}
+    assert "low-arterial-oxygen" in raised
+    fewer = Pack(tuple(rule for rule in PACK.rules if rule.id != "low-arterial-oxygen"), PACK.files, "fewer")
+    done = run_once(site.settings(), mapping(), fewer)
+    assert done.withdrawn > 0
+    assert {one["code"]["coding"][0]["code"] for one in flags(site)} == raised - {"low-arterial-oxygen"}
+    assert run_once(site.settings(), mapping(), fewer).patients == 0
+
+
+def flags(site: Site) -> list[Resource]:
+    return [json.loads(line) for reference, line in site.standing().items() if reference.startswith("Flag/")]
 
 
 def test_in_batches_the_same_is_written(site: Site, tmp_path: Path) -> None:

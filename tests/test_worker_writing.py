@@ -48,6 +48,20 @@ def quiet(made: Beside, done: Cycle) -> None:
     assert not [secret for secret in SECRETS if secret in told]
 
 
+def unmarked(_request: Any, ordinary: Any) -> Reply:
+    """The server does what is asked, and answers a write without the ETag that a read has."""
+    status, headers, body = ordinary()
+    return status, {name: value for name, value in headers.items() if name.lower() != "etag"}, body
+
+
+def test_an_etag_that_a_write_does_not_bring_is_asked_for(made: Beside) -> None:
+    made.server.fault("PUT", unmarked, 99)
+    assert made.cycle().dead == 0
+    made.server.add(gas(saturation=77.0))
+    done = made.cycle()
+    assert (done.dead, done.written > 0, made.outbox) == (0, True, [])
+
+
 # --- answers that are lost ---------------------------------------------------------------------------------------
 
 

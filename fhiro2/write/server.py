@@ -72,7 +72,7 @@ class ServerSink:
 
     def _judged(self, reference: str, content: bytes, answer: Answer) -> Delivered:
         if answer.status in (200, 201):
-            return Delivered(Fate.DONE, answer.etag or "")
+            return Delivered(Fate.DONE, answer.etag or self._client.read(reference).etag or "")
         if answer.status == 412:
             there = self._client.read(reference)
             if there.status == 200 and holds(there.body, content):
