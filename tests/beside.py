@@ -22,13 +22,10 @@ from fhiro2.worker import Cycle, Worker
 from fhiro2.write.server import ServerSink
 from tests.feeds import Resource, component, observation, panel, patient, specimen
 from tests.memory_server import FIRST_SECOND, MemoryServer
+from tests.planted import NAME, TOKEN, VALUE
 
 BASE = "https://fhir.example.org/r4"
 SOURCE = "north"
-TOKEN = "geheim.0815"
-NAME = "Muster-Eleonore"
-VALUE = 45.37
-SECRETS = (NAME, str(VALUE), TOKEN)
 NOW = FIRST_SECOND + timedelta(days=1)
 RECORDED = "2026-03-04T06:00:00.000Z"
 

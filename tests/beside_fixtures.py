@@ -9,7 +9,8 @@ from pathlib import Path
 import pytest
 import responses
 
-from tests.beside import SECRETS, Beside, Held, beside, undisturbed
+from tests.beside import Beside, Held, beside, undisturbed
+from tests.planted import SECRETS
 
 
 @pytest.fixture

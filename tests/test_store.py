@@ -252,6 +252,18 @@ def test_a_file_that_is_no_store_is_refused(tmp_path: Path) -> None:
         Store(path)
 
 
+def test_a_store_where_no_file_can_be_made_is_refused(tmp_path: Path) -> None:
+    with pytest.raises(StopError, match="cannot be made"):
+        Store(tmp_path / "nowhere" / "store.sqlite")
+
+
+def test_only_its_owner_can_read_it(store: Store) -> None:
+    with store.transaction() as work:
+        work.count("repeated")
+    modes = {path.stat().st_mode & 0o777 for path in store.path.parent.glob("store.sqlite*")}
+    assert modes == {0o600}
+
+
 def test_the_file_is_safe_against_power_loss(store: Store) -> None:
     """SQLite's own words for its settings: write-ahead log, and every commit synced (2 is FULL)."""
     with store._engine.connect() as connection:

@@ -21,21 +21,10 @@ import responses
 
 from fhiro2.errors import Fhiro2Error, RetryError, StopError
 from fhiro2.live import account_of
-from tests.beside import (
-    NAME,
-    NOW,
-    SECRETS,
-    Beside,
-    Held,
-    beside,
-    held,
-    lactate,
-    person,
-    undisturbed,
-    ward,
-)
+from tests.beside import NOW, Beside, Held, beside, held, lactate, person, undisturbed, ward
 from tests.feeds import Resource, concept, mapping, observation, specimen
 from tests.memory_server import Fault, Reply, found, issue, outcome
+from tests.planted import NAME, SECRETS
 
 Mock = responses.RequestsMock
 

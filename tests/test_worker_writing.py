@@ -13,9 +13,10 @@ import responses
 from fhiro2.errors import StopError
 from fhiro2.store.entry import DEAD, IN_FLIGHT
 from fhiro2.worker import Cycle
-from tests.beside import NAME, SECRETS, VALUE, Beside, Held, beside, gas, held, lactate
+from tests.beside import Beside, Held, beside, gas, held, lactate
 from tests.feeds import Resource
 from tests.memory_server import Fault, Reply, outcome
+from tests.planted import NAME, SECRETS, VALUE
 
 Mock = responses.RequestsMock
 pytest_plugins = ("tests.beside_fixtures",)

@@ -27,10 +27,17 @@ class Transaction(ReceivedVersions, WrittenResources):
 
 
 class Store:
-    """A store in a SQLite file, made when it is not there. Raises StopError for a file that is no store of ours."""
+    """A store in a SQLite file, made for its owner's eyes where it is not there.
+
+    Raises StopError for a file that is no store of ours, or cannot be made.
+    """
 
     def __init__(self, path: Path) -> None:
         self.path = path
+        try:
+            path.touch(mode=0o600)
+        except OSError as error:
+            raise StopError(f"{path}: cannot be made ({error.strerror}); name a folder that may be written") from None
         self._engine = create_engine(f"sqlite:///{path}")
         event.listen(self._engine, "connect", _prepare)
         event.listen(self._engine, "begin", lambda connection: connection.exec_driver_sql("BEGIN IMMEDIATE"))
