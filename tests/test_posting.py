@@ -16,7 +16,8 @@ RUN = Run("2026-01-02T00:00:00.000Z", "ab" * 32, "0.1.0")
 
 
 def written(reference: str, patient: str) -> Entry:
-    content = json.dumps({"resourceType": reference.partition("/")[0], "status": "active"}).encode()
+    parts = {"period": {"start": "2026-01-01T00:00:00Z"}, "code": {"coding": [{"code": "a-rule"}]}}
+    content = json.dumps({"resourceType": reference.partition("/")[0], "status": "active", **parts}).encode()
     return Entry(reference, patient, f"hash of {reference}", content)
 
 

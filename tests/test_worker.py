@@ -26,6 +26,7 @@ from fhiro2.settings import Mapping, Server, Settings, read_mapping
 from fhiro2.store import Store
 from fhiro2.store.entry import STANDING, WITHDRAWN, Entry
 from fhiro2.worker import Cycle
+from fhiro2.write.provenance import STANDS_NO_LONGER
 from fhiro2.write.server import holds
 from tests.feeds import Resource, observation, patient, specimen
 from tests.fhir_server import running
@@ -220,8 +221,13 @@ def test_a_corrected_gas_withdraws_a_flag_and_another_one_takes_its_place(site: 
     old = site.get(f"Flag/{flag['id']}")
     assert (old["status"], old["meta"]["versionId"]) == ("entered-in-error", "2")
     assert site.ledger()[f"Flag/{flag['id']}"].state == WITHDRAWN
-    reasons = [site.get(reference).get("reason") for reference in site.ledger() if reference.startswith("Provenance/")]
-    assert any(reasons)
+    found = [site.get(reference) for reference in site.ledger() if reference.startswith("Provenance/")]
+    (why,) = [
+        one["reason"][0]["text"]
+        for one in found
+        if one["target"][0]["reference"] == f"Flag/{flag['id']}" and "reason" in one
+    ]
+    assert why == f"{STANDS_NO_LONGER}; replaced by Flag/{later['id']}"
 
 
 def test_a_retracted_haemoglobin_ends_its_content_entered_in_error(site: Site, tmp_path: Path) -> None:

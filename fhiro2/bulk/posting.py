@@ -5,6 +5,7 @@ from __future__ import annotations
 import hashlib
 import json
 from collections.abc import Iterable
+from functools import partial
 
 import msgspec
 
@@ -44,7 +45,8 @@ def post(work: Transaction, group: set[str], wanted: Wanted, held: set[str], run
 
     outbox = [one for one in work.outbox(group) if not left_alone(one)]
     ledger = [one for one in work.ledger(group).values() if not left_alone(one)]
-    found = difference(wanted, by_reference(ledger), by_reference(outbox), lambda one: _withdrawn(one, run, reason))
+    withdraw = partial(_withdrawn, run=run, reason=reason, wanted=wanted)
+    found = difference(wanted, by_reference(ledger), by_reference(outbox), withdraw)
     again = found.drop | {one.reference for one, _ in found.post}
     work.unpost(found.drop | {one.reference for one in outbox if one.after in again})
     device = _device(run)
@@ -55,14 +57,53 @@ def post(work: Transaction, group: set[str], wanted: Wanted, held: set[str], run
     return len(found.post)
 
 
-def _withdrawn(one: Entry, run: Run, reason: str) -> tuple[Entry, Entry]:
+def _withdrawn(one: Entry, run: Run, reason: str, wanted: Wanted) -> tuple[Entry, Entry]:
     """What was written, as entered in error, with the Provenance that says since when."""
     resource = json.loads(one.content)
     resource["status"] = "entered-in-error"
     content = json.dumps(resource, separators=(",", ":"), ensure_ascii=False).encode()
     digest = hashlib.sha256(content).hexdigest()
     entry = Entry(one.reference, one.patient, digest, content, withdrawal=True)
-    return entry, _provenance(withdrawal(run, one.reference, digest, reason), one.patient, one.reference)
+    heir = _heir(one, wanted)
+    told = f"{reason}; replaced by {heir}" if heir else reason
+    return entry, _provenance(withdrawal(run, one.reference, digest, told), one.patient, one.reference)
+
+
+class _Period(msgspec.Struct):
+    start: str
+    end: str = "9999"
+
+
+class _Coded(msgspec.Struct):
+    coding: tuple[_Coding, ...]
+
+
+class _Coding(msgspec.Struct):
+    code: str
+
+
+class _Spell(msgspec.Struct):
+    """The time of a flag, and its rule."""
+
+    period: _Period
+    code: _Coded
+
+
+_SPELL = msgspec.json.Decoder(_Spell)
+
+
+def _heir(gone: Entry, wanted: Wanted) -> str:
+    """The earliest standing flag of the same rule and patient that shares time with a flag; '' where there is none."""
+    if not gone.reference.startswith("Flag/"):
+        return ""
+    old = _SPELL.decode(gone.content)
+    sharing = []
+    for reference, (entry, _) in wanted.items():
+        if reference.startswith("Flag/") and entry.patient == gone.patient:
+            new = _SPELL.decode(entry.content)
+            if new.code == old.code and new.period.start <= old.period.end and old.period.start <= new.period.end:
+                sharing.append((new.period.start, reference))
+    return min(sharing)[1] if sharing else ""
 
 
 class _Subject(msgspec.Struct):
