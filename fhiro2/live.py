@@ -63,7 +63,8 @@ def _at_work(settings: Settings, mapping: Mapping, pack: Pack) -> Iterator[Worke
         limits=Limits(silence=server.timeout_seconds),
     )
     settings = settings.model_copy(update={"base_urls": (server.url, *settings.base_urls)})
-    source = ServerSource(client, settings.base_urls, server.page_size, timedelta(minutes=server.overlap_minutes))
+    overlap = timedelta(minutes=server.overlap_minutes)
+    source = ServerSource(client, settings.base_urls, server.page_size, overlap, server.code_parameter)
     store = Store(settings.store)
     holder = f"{socket.gethostname()}:{os.getpid()}"
     try:

@@ -70,6 +70,10 @@ class Server(_Frozen):
     token_file: File | None = Field(None, description="file that holds a static bearer token and nothing else")
     ca_file: File | None = Field(None, description="certificates of a private authority (PEM)")
     page_size: int = Field(200, ge=1, le=1000, description="entries asked for in one page")
+    code_parameter: Literal["code", "combo-code"] = Field(
+        "code",
+        description="combo-code also finds panels by their components, where a server has it, but reads them often",
+    )
     overlap_minutes: float = Field(5.0, ge=0, description="how far each cycle reads back before the last one")
     since: str | None = Field(None, description="instant from which the first cycle reads; all without it")
     timeout_seconds: float = Field(30.0, gt=0, description="longest wait for one answer")

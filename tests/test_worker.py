@@ -28,7 +28,7 @@ from fhiro2.store.entry import STANDING, WITHDRAWN, Entry
 from fhiro2.worker import Cycle
 from fhiro2.write.provenance import STANDS_NO_LONGER
 from fhiro2.write.server import holds
-from tests.feeds import Resource, observation, patient, specimen
+from tests.feeds import Resource, component, concept, observation, panel, patient, specimen
 from tests.fhir_server import running
 from tests.validators import JUDGES
 
@@ -271,6 +271,19 @@ def test_a_late_specimen_makes_unknown_blood_arterial(site: Site) -> None:
     contents = [json.loads(line) for line in site.standing().values() if b'"oxygen-content-arterial"' in line]
     (value,) = [one["valueQuantity"]["value"] for one in contents]
     assert value == pytest.approx(1.34 * 12 * 0.97 + 0.0225 * 90 * 0.133322, abs=0.1)  # by definition, in mL/dL
+
+
+@pytest.mark.parametrize(("parameter", "number"), [("combo-code", 1), ("code", 0)])
+def test_a_panel_of_an_unknown_code_is_found_by_its_components(site: Site, parameter: str, number: int) -> None:
+    """Asked by ``code`` alone a server does not give it, which the settings say."""
+    parts = [component("2703-7", 90, "mm[Hg]"), component("2019-8", 40, "mm[Hg]"), component("2744-1", 7.4, "[pH]")]
+    gas = {**panel("gas", *parts), "code": concept(("urn:example:site", "GAS"))}
+    born = patient(birthDate="1970-01-01")
+    for one in (gas, born):
+        del one["meta"]
+    site.put(born, gas)
+    site.cycle(server={"code_parameter": parameter})
+    assert sum(b'"saturation-predicted"' in line for line in site.standing().values()) == number
 
 
 def test_with_a_token_and_without(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:

@@ -47,13 +47,21 @@ class Poll:
 
 
 class ServerSource:
-    """The resources of one server, read over ``client``."""
+    """The resources of one server, read over ``client``; ``code_parameter`` is what finds Observations by code."""
 
-    def __init__(self, client: Client, base_urls: Sequence[str], page_size: int, overlap: timedelta) -> None:
+    def __init__(
+        self,
+        client: Client,
+        base_urls: Sequence[str],
+        page_size: int,
+        overlap: timedelta,
+        code_parameter: str = "code",
+    ) -> None:
         self._client = client
         self._base_urls = base_urls
         self._page_size = page_size
         self._overlap = overlap
+        self._code_parameter = code_parameter
         self.door = Door()
 
     def changed(self, kind: str, since: str, poll: Poll, codes: Sequence[str] = ()) -> Iterator[list[Found]]:
@@ -66,7 +74,7 @@ class ServerSource:
         if since:
             asked["_lastUpdated"] = f"ge{self._from(since)}"
         if codes:
-            asked["code"] = ",".join(codes)
+            asked[self._code_parameter] = ",".join(codes)
         for page in self._pages(kind, asked):
             found = list(self._read(page, kind, poll, frozenset(codes)))
             for one in found:
