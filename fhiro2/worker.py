@@ -268,7 +268,7 @@ class Worker:
 
     def _basis(self) -> str:
         """What everything is computed by; where it changed, all patients are computed again."""
-        settings = self._settings.model_dump_json(exclude={"server", "store", "write"})
+        settings = self._settings.model_dump_json(exclude={"server", "store", "write", "write_together"})
         parts = (__version__, self._pack.hash, settings, self._mapping.model_dump_json())
         return hashlib.sha256("\n".join(parts).encode()).hexdigest()
 
